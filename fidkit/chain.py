@@ -1,0 +1,373 @@
+"""Chains: a row of steps, kept as a Python function that anyone can read and run.
+
+A chain that is loaded is parsed, never executed: its names are looked up in the table of steps, its
+values are read as literals and checked, and the text is made anew and must mean the same.
+"""
+
+from __future__ import annotations
+
+import ast
+import os
+from collections.abc import Iterable, Iterator, Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import xarray as xr
+
+from fidkit.files import write_whole
+from fidkit.params import FidkitError, Step, Value, find_step
+
+__all__ = ["Call", "Chain", "chain_of"]
+
+#: Bounds on a chain that comes from outside, in characters and nested brackets.
+LARGEST_TEXT = 64_000
+DEEPEST_NESTING = 20
+MOST_STEPS = 200
+
+
+@dataclass(frozen=True)
+class Call:
+    """One step with its arguments, checked when it is made.
+
+    Parameters
+    ----------
+    step : str
+        Name of a registered step.
+    arguments : mapping
+        Values by parameter name.
+
+    Raises
+    ------
+    FidkitError
+        For an unknown step or parameter or a value that is not allowed.
+    """
+
+    step: str
+    arguments: Mapping[str, Value]
+
+    def __init__(self, step: str, arguments: Mapping[str, object] | None = None, /, **more: object):
+        found = find_step(step)
+        object.__setattr__(self, "step", found.name)
+        object.__setattr__(self, "arguments", found.check({**(arguments or {}), **more}))
+
+    def __hash__(self) -> int:
+        return hash((self.step, tuple(self.arguments.items())))
+
+    @property
+    def spec(self) -> Step:
+        """What the table of steps says of this one."""
+        return find_step(self.step)
+
+    def __str__(self) -> str:
+        return self.spec.call_text(self.arguments)
+
+
+class Chain:
+    """A row of steps that can be called on a signal, saved as text, and loaded back.
+
+    Parameters
+    ----------
+    calls : iterable of Call or str
+        The steps in order; a bare name is a step with its defaults.
+    title : str
+        One line saying what the chain is for.
+
+    Raises
+    ------
+    FidkitError
+        If a step cannot follow the one before it.
+
+    Examples
+    --------
+    >>> chain = Chain([Call("apodize_exponential", broadening=1.5), "fourier_transform"])
+    >>> spectrum = chain(fid)  # doctest: +SKIP
+    """
+
+    def __init__(self, calls: Iterable[Call | str] = (), title: str = ""):
+        self.calls = tuple(call if isinstance(call, Call) else Call(call) for call in calls)
+        self.title = " ".join(title.split())
+        if len(self.calls) > MOST_STEPS:
+            raise FidkitError(f"a chain holds at most {MOST_STEPS} steps; got {len(self.calls)}")
+        self.takes = next((c.spec.takes for c in self.calls if c.spec.takes != "signal"), "fid")
+        kind: str = self.takes
+        for number, call in enumerate(self.calls, 1):
+            spec = call.spec
+            if spec.takes not in ("signal", kind):
+                raise FidkitError(
+                    f"step {number} of the chain, {call.step}, takes a {spec.takes}, but a {kind} "
+                    f"comes to it; put {'fourier_transform' if kind == 'fid' else 'inverse_transform'}"
+                    " before it or move it"
+                )
+            kind = kind if spec.gives == "signal" else spec.gives
+        self.gives = kind
+
+    def __call__(self, signal: xr.DataArray) -> xr.DataArray:
+        """Take every step in turn.
+
+        Parameters
+        ----------
+        signal : xarray.DataArray
+            FID, or spectrum for a chain that begins with one; leading dimensions are carried
+            through.
+
+        Returns
+        -------
+        xarray.DataArray
+            What the last step gives, its ``history`` telling the whole way.
+
+        Raises
+        ------
+        FidkitError
+            What a step raises, with its number in the chain.
+        """
+        for number, call in enumerate(self.calls, 1):
+            try:
+                signal = call.spec.function(signal, **call.arguments)
+            except FidkitError as error:
+                raise type(error)(f"step {number} of the chain: {error}") from error
+        return signal
+
+    def __iter__(self) -> Iterator[Call]:
+        return iter(self.calls)
+
+    def __len__(self) -> int:
+        return len(self.calls)
+
+    def __eq__(self, other: object) -> bool:
+        return isinstance(other, Chain) and self.calls == other.calls
+
+    def __hash__(self) -> int:
+        return hash(self.calls)
+
+    def __repr__(self) -> str:
+        return f"Chain([{', '.join(str(call) for call in self.calls)}])"
+
+    @property
+    def source(self) -> str:
+        """The chain as the Python function that it is."""
+        from fidkit import __version__
+
+        title = self.title.replace("\\", "/").replace('"', "'")
+        head = f"Saved by fidkit {__version__}" + (f": {title}" if title else ".")
+        lines = [f'"""{head}"""', "", "import fidkit as fk", "", "", f"def process({self.takes}):"]
+        kind: str = self.takes
+        for call in self.calls:
+            spec = call.spec
+            after = kind if spec.gives == "signal" else spec.gives
+            units = ", ".join(
+                f"{name} [{spec.parameters[name].unit}]"
+                for name, value in call.arguments.items()
+                if spec.parameters[name].unit and value is not None
+            )
+            text = f"    {after} = fk.{spec.call_text(call.arguments, kind)}"
+            lines.append(text + (f"  # {units}" if units else ""))
+            kind = after
+        lines.append(f"    return {kind}")
+        return "\n".join(lines) + "\n"
+
+    def save(self, path: str | os.PathLike[str]) -> Path:
+        """Write the chain as a Python file, whole or not at all.
+
+        Parameters
+        ----------
+        path : path-like
+            File to write; one that is there already is replaced.
+
+        Returns
+        -------
+        pathlib.Path
+            The file.
+
+        Raises
+        ------
+        OSError
+            If it cannot be written.
+        """
+        return write_whole(path, self.source.encode())
+
+    @classmethod
+    def load(cls, path: str | os.PathLike[str]) -> Chain:
+        """Read a chain from a file; the file is parsed, never executed.
+
+        Parameters
+        ----------
+        path : path-like
+            File as `save` writes it.
+
+        Returns
+        -------
+        Chain
+            The chain.
+
+        Raises
+        ------
+        FidkitError
+            If the file holds anything but a chain of known steps with allowed values.
+        OSError
+            If it cannot be read.
+        """
+        path = Path(path)
+        with path.open("rb") as file:
+            raw = file.read(LARGEST_TEXT + 1)
+        try:
+            text = raw.decode()
+        except UnicodeDecodeError:
+            raise FidkitError(
+                f"{path.name}: a chain is a text file in UTF-8; this is none"
+            ) from None
+        return cls.from_source(text, path.name)
+
+    @classmethod
+    def from_source(cls, text: str, name: str = "chain") -> Chain:
+        """Read a chain from its text; see `load`.
+
+        Parameters
+        ----------
+        text : str
+            The Python function, as `source` gives it.
+        name : str
+            What to call it in errors.
+
+        Returns
+        -------
+        Chain
+            The chain.
+
+        Raises
+        ------
+        FidkitError
+            If the text holds anything but a chain of known steps with allowed values.
+        """
+
+        def refuse(what: str, node: ast.AST | None = None) -> FidkitError:
+            line = f", line {node.lineno}" if isinstance(node, ast.stmt | ast.expr) else ""
+            return FidkitError(
+                f"{name}{line}: {what}; a chain is one function process(...) of fidkit steps, as "
+                "Chain.save writes it"
+            )
+
+        tree = _parsed(text, refuse)
+        body = list(tree.body)
+        title = ""
+        if body and isinstance(body[0], ast.Expr) and isinstance(body[0].value, ast.Constant):
+            title = _title(body.pop(0).value.value)  # type: ignore[attr-defined]
+        if not body or ast.dump(body[0]) != ast.dump(ast.parse("import fidkit as fk").body[0]):
+            raise refuse("expected `import fidkit as fk`", body[0] if body else None)
+        if len(body) != 2 or not isinstance(body[1], ast.FunctionDef) or body[1].name != "process":
+            raise refuse(
+                "expected nothing but def process(...)", body[1] if len(body) > 1 else None
+            )
+        statements = body[1].body
+        if not isinstance(statements[-1], ast.Return):
+            raise refuse("expected a return at the end", statements[-1])
+        calls = []
+        for statement in statements[:-1]:
+            value = statement.value if isinstance(statement, ast.Assign) else None
+            if not (
+                isinstance(value, ast.Call)
+                and isinstance(value.func, ast.Attribute)
+                and isinstance(value.func.value, ast.Name)
+                and value.func.value.id == "fk"
+            ):
+                raise refuse("expected a line such as `fid = fk.remove_offset(fid)`", statement)
+            arguments: dict[str, object] = {}
+            for keyword in value.keywords:
+                try:
+                    literal = ast.literal_eval(keyword.value)
+                except (ValueError, TypeError, SyntaxError, MemoryError, RecursionError):
+                    raise refuse(f"{keyword.arg}: only plain values are allowed", value) from None
+                if keyword.arg is None or keyword.arg in arguments:
+                    raise refuse("every argument must be named, once", value)
+                arguments[keyword.arg] = literal
+            try:
+                calls.append(Call(value.func.attr, arguments))
+            except FidkitError as error:
+                raise type(error)(f"{name}, line {statement.lineno}: {error}") from None
+        try:
+            chain = cls(calls, title)
+        except FidkitError as error:
+            raise FidkitError(f"{name}: {error}") from None
+        again = ast.parse(chain.source)
+        if ast.dump(again.body[2]) != ast.dump(_sorted_arguments(body[1], calls)):
+            raise refuse("the signal must pass from step to step, and nothing else may stand here")
+        return chain
+
+
+def chain_of(signal: xr.DataArray, title: str = "") -> Chain:
+    """The chain that made a signal, from its history.
+
+    Parameters
+    ----------
+    signal : xarray.DataArray
+        FID or spectrum made by fidkit steps.
+    title : str
+        One line saying what the chain is for.
+
+    Returns
+    -------
+    Chain
+        The steps in order; empty for a raw record.
+
+    Raises
+    ------
+    FidkitError
+        If the history is no list of fidkit steps.
+    """
+    calls = []
+    for number, line in enumerate(str(signal.attrs.get("history", "")).splitlines(), 1):
+        try:
+            node = ast.parse(line.strip(), mode="eval").body if len(line) <= LARGEST_TEXT else None
+            if not (
+                isinstance(node, ast.Call) and isinstance(node.func, ast.Name) and not node.args
+            ):
+                raise ValueError
+            arguments = {str(k.arg): ast.literal_eval(k.value) for k in node.keywords}
+        except (ValueError, TypeError, SyntaxError, MemoryError, RecursionError):
+            raise FidkitError(
+                f"line {number} of the history is no fidkit step: {line[:80]!r}; "
+                "start again from the raw record"
+            ) from None
+        calls.append(Call(node.func.id, arguments))
+    return Chain(calls, title)
+
+
+def _parsed(text: str, refuse: Any) -> ast.Module:
+    if len(text) > LARGEST_TEXT:
+        raise refuse(f"longer than {LARGEST_TEXT} characters")
+    if "\0" in text:
+        raise refuse("holds a null character")
+    depth = deepest = 0
+    for character in text:
+        depth += (character in "([{") - (character in ")]}")
+        deepest = max(deepest, depth)
+    if deepest > DEEPEST_NESTING:
+        raise refuse(f"brackets nested deeper than {DEEPEST_NESTING}")
+    import warnings
+
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # odd escapes in a hostile text are none of ours
+            return ast.parse(text)
+    except SyntaxError as error:
+        raise refuse(f"not Python: {error.msg} in line {error.lineno}") from None
+    except (MemoryError, RecursionError, ValueError):
+        raise refuse("too deep to read") from None
+
+
+def _title(text: object) -> str:
+    first = str(text).strip().splitlines()[0] if str(text).strip() else ""
+    return first.partition(": ")[2] if first.startswith("Saved by fidkit") else first
+
+
+def _sorted_arguments(function: ast.FunctionDef, calls: list[Call]) -> ast.FunctionDef:
+    """The function with each call's arguments in the order of the signature, values normalised."""
+    for statement, call in zip(function.body, calls, strict=False):
+        value = statement.value  # type: ignore[attr-defined]
+        given = {keyword.arg: keyword for keyword in value.keywords}
+        value.keywords = [
+            ast.keyword(name, ast.parse(repr(wanted), mode="eval").body)
+            for name, wanted in call.arguments.items()
+            if name in given
+        ]
+    return function

@@ -1,0 +1,160 @@
+"""From time to frequency and back, and the zeros in between."""
+
+from __future__ import annotations
+
+import math
+from typing import Annotated, Literal
+
+import numpy as np
+import scipy.fft
+import xarray as xr
+
+from fidkit import signals
+from fidkit.params import FidkitError, Gives, Range, Slider, step
+
+
+@step
+def zero_fill(
+    fid: xr.DataArray,
+    *,
+    factor: Annotated[float | None, Range(1, 1024), Slider(1, 16, 1)] = None,
+    points: Annotated[int | None, Range(2, 2**31)] = None,
+) -> xr.DataArray:
+    """Append zeros, so that the spectrum is drawn on a finer grid; the line itself stays.
+
+    Parameters
+    ----------
+    factor : float, optional
+        Length afterwards over length before, rounded up to a whole point.
+    points : int, optional
+        Length afterwards. Where neither is given: the next length that transforms fast.
+
+    Returns
+    -------
+    xarray.DataArray
+        The longer FID; its attribute ``acquired_points`` says how many points are measured.
+
+    Raises
+    ------
+    FidkitError
+        If both are given, or the record would get shorter.
+    """
+    length = fid.sizes["time"]
+    if factor is not None and points is not None:
+        raise FidkitError("zero_fill: give factor or points, not both")
+    if factor is not None:
+        points = math.ceil(round(length * factor, 6))  # 1000 * 1.1 is 1100, not 1101
+    elif points is None:
+        points = scipy.fft.next_fast_len(length)
+    if points < length:
+        raise FidkitError(
+            f"zero_fill: points must be at least the {length} the record has; got {points}; "
+            "remove_end shortens a record"
+        )
+    values = np.zeros((*fid.shape[:-1], points), dtype=fid.dtype)
+    values[..., :length] = fid.values
+    result = signals.fid_array(
+        values,
+        dwell=signals.dwell_time(fid),
+        start=signals.time_start(fid),
+        dims=fid.dims[:-1],  # type: ignore[arg-type]
+        coords=fid.coords,  # type: ignore[arg-type]
+        attributes=fid.attrs,
+    )
+    result.attrs["acquired_points"] = signals.acquired_points(fid)
+    return result
+
+
+@step
+def fourier_transform(
+    fid: xr.DataArray, *, first_point: Literal["full", "half"] = "full"
+) -> Annotated[xr.DataArray, Gives("spectrum")]:
+    """Transform to the spectrum, scaled by the dwell time; the dead time enters the phase.
+
+    Parameters
+    ----------
+    first_point : {'full', 'half'}
+        How the first point counts. ``full`` is the plain discrete transform, which lifts the
+        whole spectrum by half the first point times the dwell time; ``half`` takes that away, for
+        a record that starts at time zero.
+
+    Returns
+    -------
+    xarray.DataArray
+        Spectrum in unit of the signal per Hz, frequency ascending.
+
+    Raises
+    ------
+    FidkitError
+        For a real-valued record (see `make_analytic`).
+
+    Notes
+    -----
+    ``S(f) = dwell * sum_n w_n s_n exp(-2 pi i f t_n)`` with the true times ``t_n``. On the first
+    point: Otting, Widmer, Wagner and Wuthrich, J. Magn. Reson. 66, 187 (1986).
+    """
+    signals.require_complex(fid, "fourier_transform")
+    dwell, start = signals.dwell_time(fid), signals.time_start(fid)
+    points = fid.sizes["time"]
+    values = fid.values
+    if first_point == "half":
+        values = values.copy()
+        values[..., 0] *= 0.5
+    frequency = scipy.fft.fftshift(scipy.fft.fftfreq(points, dwell))
+    # in place of a conversion: the scalar factor keeps single precision single
+    spectrum = scipy.fft.fftshift(scipy.fft.fft(values, axis=-1), axes=-1)
+    factor = dwell * np.exp(-2j * np.pi * frequency * start) if start else np.float64(dwell)
+    spectrum *= factor.astype(spectrum.dtype if start else spectrum.real.dtype)
+    result = signals.spectrum_array(
+        spectrum,
+        frequency=frequency,
+        dims=fid.dims[:-1],  # type: ignore[arg-type]
+        coords=fid.coords,  # type: ignore[arg-type]
+        attributes=fid.attrs,
+    )
+    units = fid.attrs.get("units", "1")
+    result.attrs |= {
+        "units": "s" if units == "1" else f"{units} s",
+        "time_start": start,
+        "first_point": first_point,
+        "acquired_points": signals.acquired_points(fid),
+    }
+    return result
+
+
+@step
+def inverse_transform(spectrum: xr.DataArray) -> Annotated[xr.DataArray, Gives("fid")]:
+    """Transform a spectrum back to the FID that it came from: undoes `fourier_transform`.
+
+    Returns
+    -------
+    xarray.DataArray
+        The FID on its true times; zeros that were filled in are still there.
+
+    Raises
+    ------
+    FidkitError
+        For a real-valued spectrum.
+    """
+    signals.require_complex(spectrum, "inverse_transform")
+    frequency = spectrum["frequency"].values
+    dwell = 1 / signals.spectral_width(spectrum)
+    start = float(spectrum.attrs.get("time_start", 0.0))
+    values = spectrum.values * np.exp(2j * np.pi * frequency * start).astype(spectrum.dtype)
+    # a spectrum from elsewhere may have any frequency at index 0; what is left is a plain shift
+    shift = -round(frequency[0] / (frequency[1] - frequency[0]))
+    fid = scipy.fft.ifft(np.roll(values, -shift, axis=-1), axis=-1)
+    fid /= fid.real.dtype.type(dwell)
+    if spectrum.attrs.get("first_point") == "half":
+        fid[..., 0] *= 2
+    result = signals.fid_array(
+        fid,
+        dwell=dwell,
+        start=start,
+        dims=spectrum.dims[:-1],  # type: ignore[arg-type]
+        coords=spectrum.coords,  # type: ignore[arg-type]
+        attributes=spectrum.attrs,
+    )
+    units = str(spectrum.attrs.get("units", "1"))
+    result.attrs["units"] = "1" if units == "s" else units.removesuffix(" s")
+    return result
