@@ -25,6 +25,10 @@ from fidkit.signals import spectrum_from_array as spectrum_from_array
 
 if TYPE_CHECKING:  # the steps again, for editors and type checkers; at run time see below
     from fidkit.steps.apodization import *
+    from fidkit.steps.baseline import *
+    from fidkit.steps.combining import *
+    from fidkit.steps.conditioning import *
+    from fidkit.steps.phase import *
     from fidkit.steps.transform import *
 
 
