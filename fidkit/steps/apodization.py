@@ -2,19 +2,25 @@
 
 `fidkit.measure` relies on that: it applies the same windows to a record of ones to learn how a
 spectrum was weighted. A step that does anything else belongs in another file.
+
+Time zero of every window is the middle of the pulse, whatever the dead time. Where zeros were
+filled in, a window that spans the record spans its measured part.
 """
 
 from __future__ import annotations
 
+import math
 from typing import Annotated, Any
 
 import numpy as np
 import numpy.typing as npt
 import xarray as xr
 
-from fidkit.params import Range, Slider, Unit, step
+from fidkit import signals
+from fidkit.params import FidkitError, Range, Slider, Unit, step
 
 Broadening = Annotated[float, Unit("Hz"), Range(0), Slider(0, 50, 0.1)]
+Fraction = Annotated[float, Unit("of the record"), Range(0, 1), Slider(0, 1, 0.01)]
 
 
 @step
@@ -36,6 +42,162 @@ def apodize_exponential(fid: xr.DataArray, *, broadening: Broadening = 1.0) -> x
     Weight ``exp(-pi * broadening * t)``: the Fourier pair of a Lorentzian of that width.
     """
     return _weighted(fid, np.exp(-np.pi * broadening * fid["time"].values))
+
+
+@step
+def apodize_gaussian(fid: xr.DataArray, *, broadening: Broadening = 1.0) -> xr.DataArray:
+    """Weight by a Gaussian that alone gives lines of full width `broadening`.
+
+    Parameters
+    ----------
+    broadening : float
+        Full width at half maximum of the Gaussian that every line is convolved with, Hz.
+        Gaussian widths add in quadrature.
+
+    Returns
+    -------
+    xarray.DataArray
+        The weighted FID.
+
+    Notes
+    -----
+    Weight ``exp(-(pi * broadening * t)**2 / (4 ln 2))``: the Fourier pair of a Gaussian of that
+    width.
+    """
+    return _weighted(fid, np.exp(_gaussian_exponent(fid, broadening)))
+
+
+@step
+def apodize_lorentz_to_gauss(
+    fid: xr.DataArray, *, narrowing: Broadening = 0.0, broadening: Broadening = 1.0
+) -> xr.DataArray:
+    """Take a Lorentzian width away and put a Gaussian one in its place.
+
+    Parameters
+    ----------
+    narrowing : float
+        Lorentzian full width to take away, Hz. A line of just that width becomes a Gaussian.
+    broadening : float
+        Full width at half maximum of the Gaussian, Hz.
+
+    Returns
+    -------
+    xarray.DataArray
+        The weighted FID.
+
+    Raises
+    ------
+    FidkitError
+        If the weight would pass the largest number that the record's precision holds.
+
+    Notes
+    -----
+    Weight ``exp(pi * narrowing * t) * exp(-(pi * broadening * t)**2 / (4 ln 2))``: the inverse of
+    `apodize_exponential` times `apodize_gaussian`.
+    """
+    exponent = np.pi * narrowing * fid["time"].values + _gaussian_exponent(fid, broadening)
+    # a tenth of the exponent range is left for the values of the record
+    limit = 0.9 * math.log(float(np.finfo(fid.dtype).max))
+    if exponent.max() > limit:
+        raise FidkitError(
+            f"apodize_lorentz_to_gauss: narrowing {narrowing:g} Hz with broadening "
+            f"{broadening:g} Hz weighs a point by exp({exponent.max():.4g}); {fid.dtype} allows "
+            f"exp({limit:.3g}); narrow less, broaden more or shorten the record"
+        )
+    return _weighted(fid, np.exp(exponent))
+
+
+@step
+def apodize_cosine(
+    fid: xr.DataArray,
+    *,
+    power: Annotated[int, Range(1, 8), Slider(1, 4, 1)] = 1,
+    peak: Annotated[float, Unit("of the record"), Range(0, 0.5), Slider(0, 0.5, 0.01)] = 0.0,
+) -> xr.DataArray:
+    """Weight by part of a cosine that reaches zero at the last measured point.
+
+    Parameters
+    ----------
+    power : int
+        Power of the cosine; 2 gives the raised cosine.
+    peak : float
+        Where the weight is 1, as a fraction of the time from the middle of the pulse to the last
+        measured point: 0 gives a quarter period that only falls, 0.5 half a sine wave.
+
+    Returns
+    -------
+    xarray.DataArray
+        The weighted FID.
+
+    Raises
+    ------
+    FidkitError
+        If the record ends before the middle of the pulse.
+
+    Notes
+    -----
+    Weight ``cos(pi/2 * (t/T - peak) / (1 - peak))**power`` with ``T`` the time of the last measured
+    point: the powers of a cosine in Harris, Proc. IEEE 66, 51 (1978).
+    """
+    time = fid["time"].values
+    end = float(time[signals.acquired_points(fid) - 1])
+    if end <= 0:
+        raise FidkitError(
+            "apodize_cosine: the record must reach past the middle of the pulse; its last measured "
+            f"point is at {end:g} s; give the true time_start"
+        )
+    angle = (time / end - peak) / (1 - peak)
+    return _weighted(fid, np.cos(np.pi / 2 * np.clip(angle, -1, 1)) ** power)
+
+
+@step
+def apodize_trapezoid(
+    fid: xr.DataArray, *, rise: Fraction = 0.0, fall: Fraction = 0.1
+) -> xr.DataArray:
+    """Ramp the ends of the record: up from zero at the start, down to zero at the end.
+
+    Parameters
+    ----------
+    rise : float
+        Fraction of the measured record over which the weight goes from 0 to 1.
+    fall : float
+        Fraction of the measured record over which it goes from 1 to 0, reached at the last
+        measured point.
+
+    Returns
+    -------
+    xarray.DataArray
+        The weighted FID.
+
+    Raises
+    ------
+    FidkitError
+        If the ramps overlap.
+
+    Notes
+    -----
+    Linear ramps; common practice against the ripple of a record that was cut short.
+    """
+    if rise + fall > 1:
+        raise FidkitError(
+            f"apodize_trapezoid: rise and fall must not overlap, so together be at most 1; got "
+            f"{rise:g} and {fall:g}"
+        )
+    last = max(signals.acquired_points(fid) - 1, 1)
+    position = np.arange(fid.sizes["time"]) / last
+    weight = np.ones(position.size)
+    if rise > 0:
+        weight = np.minimum(weight, position / rise)
+    if fall > 0:
+        weight = np.minimum(weight, (1 - position) / fall)
+    return _weighted(fid, np.maximum(weight, 0))
+
+
+def _gaussian_exponent(fid: xr.DataArray, broadening: float) -> npt.NDArray[np.float64]:
+    exponent: npt.NDArray[np.float64] = -((np.pi * broadening * fid["time"].values) ** 2) / (
+        4 * math.log(2)
+    )
+    return exponent
 
 
 def _weighted(fid: xr.DataArray, weight: npt.NDArray[Any]) -> xr.DataArray:
