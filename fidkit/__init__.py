@@ -15,6 +15,7 @@ from fidkit import steps as steps
 from fidkit.chain import Call as Call
 from fidkit.chain import Chain as Chain
 from fidkit.chain import chain_of as chain_of
+from fidkit.measure import measure as measure
 from fidkit.nuclei import NUCLEI as NUCLEI
 from fidkit.nuclei import field_from_frequency as field_from_frequency
 from fidkit.nuclei import larmor_frequency as larmor_frequency

@@ -44,6 +44,15 @@ class Nucleus:
             return abs(self.magnetogyric_ratio) * 1e7 / (2 * math.pi)
         raise FidkitError(f"shielding must be 'shielded' or 'bare'; got {shielding!r}")
 
+    @property
+    def relative_uncertainty(self) -> float:
+        """Standard uncertainty of the shielded frequency, as a fraction of it.
+
+        That of the constant for the proton, and the rounding of the ratio to six decimals.
+        """
+        rounding = 0.0 if self.name == "1H" else 1e-6 / math.sqrt(12) / self.frequency_ratio
+        return math.hypot(PROTON_SHIELDED[1] / PROTON_SHIELDED[0], rounding)
+
 
 #: Frequency ratios (Xi) and magnetogyric ratios: Harris et al. 2001, table 1.
 NUCLEI: dict[str, Nucleus] = {

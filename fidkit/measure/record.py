@@ -1,0 +1,178 @@
+"""What was measured, seen back through the steps that made a signal.
+
+A line's natural width stands in the raw record. Windows multiply that record by known weights,
+zero filling appends nothing, a transform and a phase can be undone: so the record, with white
+noise, is recovered from a finished spectrum, and apodization and truncation need no correction.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+import xarray as xr
+
+from fidkit import signals
+from fidkit.chain import Call, chain_of
+from fidkit.params import FidkitError
+from fidkit.steps.transform import inverse_transform
+
+__all__ = ["Record", "Unseen", "record_of"]
+
+#: Smallest weight that is divided out again, of the largest, by the precision of the values:
+#: rounding errors, of 1e-16 and 1e-7, grow by its inverse and must stay far below any noise.
+SMALLEST_WEIGHT = {8: 1e-3, 16: 1e-8}
+
+WINDOWS = "fidkit.steps.apodization"
+#: Steps between transform and measurement that leave the way back open.
+UNDONE = ("correct_phase", "auto_phase", "correct_baseline")
+
+
+class Unseen(Exception):
+    """The way back to the record is closed; the text says why."""
+
+
+@dataclass(frozen=True)
+class Record:
+    """Records behind a signal, of shape (records, points), and how the signal weights them.
+
+    `weight` has the shape (points,) or (records, points) and belongs to the signal as it stands;
+    `values` are free of it. `fixed` says whether the weight is the same for all records.
+    """
+
+    values: npt.NDArray[Any]
+    weight: npt.NDArray[Any]
+    start: float
+    dwell: float
+
+
+def record_of(signal: xr.DataArray) -> Record:
+    """Return what was measured, in time, with white noise.
+
+    Parameters
+    ----------
+    signal : xarray.DataArray
+        FID or spectrum; leading dimensions are flattened.
+
+    Returns
+    -------
+    Record
+        The record with every window divided out.
+
+    Raises
+    ------
+    Unseen
+        If the signal's history does not lead back to a record.
+    FidkitError
+        If a real-valued record is not analytic yet.
+    """
+    try:
+        calls = chain_of(signal).calls
+    except FidkitError as error:
+        raise Unseen(f"its history cannot be read ({error})") from None
+    for call in calls:
+        if not call.spec.room.startswith("fidkit.steps."):
+            raise Unseen(f"what the step {call.step} does to a width is not known")
+    half = False
+    fid = signal
+    if not signals.is_fid(signal):
+        fid, half = _back(signal, calls)
+    else:
+        signals.require_complex(signal, "measure")
+    measured = signals.acquired_points(fid)
+    values = fid.values[..., :measured].reshape(-1, measured)
+    start, dwell = signals.time_start(fid), signals.dwell_time(fid)
+    weight = _weight(signal, calls, measured, start, dwell)
+    if half:
+        weight[..., 0] *= 0.5
+        values = values.copy()
+        values[..., 0] *= 0.5
+    strength = np.abs(weight).reshape(-1, measured)
+    enough = strength >= SMALLEST_WEIGHT[values.real.dtype.itemsize * 2] * strength.max(
+        -1, keepdims=True
+    )
+    kept = enough.all(axis=0)
+    if not kept.any():
+        raise Unseen("its windows leave nothing of the record")
+    first = int(kept.argmax())
+    length = int((~kept[first:]).argmax()) or measured - first
+    part = slice(first, first + length)
+    return Record(
+        values=values[:, part].astype(np.complex128) / weight[..., part],
+        weight=weight[..., part],
+        start=start + first * dwell,
+        dwell=dwell,
+    )
+
+
+def _back(spectrum: xr.DataArray, calls: tuple[Call, ...]) -> tuple[xr.DataArray, bool]:
+    """The FID behind a spectrum, and whether its first point counts half."""
+    if not np.iscomplexobj(spectrum.data):
+        raise Unseen("its imaginary part was not kept")
+    names = [call.step for call in calls]
+    if "fourier_transform" not in names:
+        raise Unseen("how it was made is not recorded")
+    last = len(names) - 1 - names[::-1].index("fourier_transform")
+    for name in names[last + 1 :]:
+        if name not in UNDONE:
+            raise Unseen(f"the step {name} after the transform cannot be undone")
+    frequency = spectrum["frequency"].values
+    points = frequency.size
+    expected = -(points // 2) * signals.spectral_width(spectrum) / points
+    tolerance = 0.01 * signals.spectral_width(spectrum) / points
+    if points < signals.acquired_points(spectrum) or abs(frequency[0] - expected) > tolerance:
+        raise Unseen("it is only a part of the spectrum that was made")
+    if "applied_phase" in spectrum.coords:
+        turn = spectrum["applied_phase"] + spectrum["applied_delay"] * spectrum["frequency"]
+        phasor = np.exp(-1j * np.deg2rad(_aligned(turn, spectrum)))
+        spectrum = spectrum.copy(data=spectrum.values * phasor.astype(spectrum.dtype))
+    return inverse_transform(spectrum), spectrum.attrs.get("first_point") == "half"
+
+
+def _weight(
+    signal: xr.DataArray, calls: tuple[Call, ...], points: int, start: float, dwell: float
+) -> npt.NDArray[Any]:
+    """The product of all windows, by applying them to a record of ones."""
+
+    def ones(skip: int = 0) -> xr.DataArray:
+        leading = signal.isel({signal.dims[-1]: 0}, drop=True)
+        return signals.fid_array(
+            np.ones((*leading.shape, points - 2 * skip)),
+            dwell=dwell,
+            start=start + skip * dwell,
+            dims=leading.dims,  # type: ignore[arg-type]
+            coords=leading.coords,  # type: ignore[arg-type]
+            attributes={**signal.attrs, "history": "", "acquired_points": points - 2 * skip},
+        )
+
+    probe = ones()
+    for place, call in enumerate(calls):
+        if call.spec.room != WINDOWS:
+            continue
+        before = probe
+        probe = _window(signal, call, probe)
+        later = {c.step for c in calls[place + 1 :]}
+        if later & {"remove_start", "remove_end", "remove_filter_delay", "rebuild_start"}:
+            # a window that depends on the extent of the record was another one then
+            shorter = _window(signal, call, ones(1)).values
+            same = np.abs((probe / before).values[..., 1:-1] - shorter) < 1e-9
+            if not same.all() or "remove_filter_delay" in later:
+                raise Unseen(f"the record was shortened after {call.step}; put that step last")
+    weight: npt.NDArray[Any] = probe.values.reshape(-1, points).real.copy()
+    return weight[0] if (weight == weight[0]).all() else weight
+
+
+def _window(signal: xr.DataArray, call: Call, probe: xr.DataArray) -> xr.DataArray:
+    if call.step == "apodize_matched":
+        # found from the data then, kept with the result
+        decay = signal["matched_broadening"] * probe["time"]
+        return probe.copy(data=probe.values * np.exp(-np.pi * _aligned(decay, probe)))
+    result: xr.DataArray = call.spec.function(probe, **call.arguments)
+    return result
+
+
+def _aligned(values: xr.DataArray, like: xr.DataArray) -> npt.NDArray[Any]:
+    """The values of one array, spread over the dimensions of another."""
+    return np.asarray(values.broadcast_like(like).transpose(*like.dims).values)
