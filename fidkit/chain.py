@@ -86,7 +86,8 @@ class Chain:
 
     def __init__(self, calls: Iterable[Call | str] = (), title: str = ""):
         self.calls = tuple(call if isinstance(call, Call) else Call(call) for call in calls)
-        self.title = " ".join(title.split())
+        # what cannot be printed could not be read back either
+        self.title = "".join(c for c in " ".join(title.split()) if c.isprintable())[:200]
         if len(self.calls) > MOST_STEPS:
             raise FidkitError(f"a chain holds at most {MOST_STEPS} steps; got {len(self.calls)}")
         self.takes = next((c.spec.takes for c in self.calls if c.spec.takes != "signal"), "fid")
