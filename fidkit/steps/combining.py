@@ -66,7 +66,9 @@ def average_shots(
             reference = aligned.mean(axis=0)
         mean = reference.astype(values.dtype)
     else:
-        mean = values.mean(axis=0)
+        # summed in double precision: rounding would grow with the number of shots
+        wide = np.complex128 if np.iscomplexobj(values) else np.float64
+        mean = values.mean(axis=0, dtype=wide).astype(values.dtype)
     return signal.isel(shot=0, drop=True).copy(data=mean)
 
 
@@ -108,7 +110,8 @@ def combine_channels(
     (Roemer et al., Magn. Reson. Med. 16, 192 (1990)). b is the first singular vector of the
     whitened record before the tail. The result is ``w^H x / w^H b`` times b of the channel that is
     strongest; P and b are taken over all other leading dimensions together, as the coils are the
-    same. Signal left in the tail changes only P along b, which leaves the weights as they are.
+    same. Lines that still stand out in the spectrum of the tail are cut out of the noise: the
+    weights would turn against them.
     """
     where = "combine_channels"
     _require(fid, "channel", where)
@@ -145,7 +148,8 @@ def _aligned(
     if phase:
         overlap = np.sum(product * turn, axis=-1, keepdims=True)
         turn = turn * np.exp(-1j * np.angle(overlap))
-    return values * turn
+    aligned: npt.NDArray[Any] = values * turn
+    return aligned
 
 
 def _difference(
@@ -185,10 +189,8 @@ def _best_weights(
             f"channels) and leave some of the {measured} measured points; got {tail:g} fraction, "
             f"{noise[0].size} points"
         )
-    if count > 1:
-        noise = noise - noise.mean(axis=-1, keepdims=True)
-    flat = noise.reshape(channels, -1)
-    covariance = flat @ flat.conj().T / flat.shape[1]
+    flat = _without_lines(noise).reshape(channels, -1)
+    covariance = flat @ flat.conj().T / max(flat.shape[1], 1)
     scale = np.sqrt(np.real(np.diag(covariance)))
     # the channels' own gains say nothing about whether their noise is independent
     relative = covariance / np.outer(scale, scale) if np.all(scale > 0) else None
@@ -206,3 +208,26 @@ def _best_weights(
     # with w = inverse(P) b, w^H x is vector^H inverse(lower) x, and w^H b is one
     weights: npt.NDArray[Any] = np.linalg.solve(lower.conj().T, vector).conj() * pattern[strongest]
     return weights
+
+
+def _without_lines(noise: npt.NDArray[Any]) -> npt.NDArray[Any]:
+    """The noise of the channels, up to a common factor, without lines that stand out of it.
+
+    Where there is none the record itself; else its spectrum under a raised cosine, whose feet fall
+    fast, without the bins of the lines.
+    """
+    if noise.shape[-1] > 1:
+        noise = noise - noise.mean(axis=-1, keepdims=True)
+    window = np.sin(np.pi * (np.arange(noise.shape[-1]) + 0.5) / noise.shape[-1]) ** 2
+    spectrum = scipy.fft.fft(noise * window, axis=-1)
+    power = np.abs(spectrum) ** 2
+    records = noise[0, ..., 0].size
+    power = power.reshape(power.shape[0], records, -1).mean(axis=1)
+    # of one record of noise one bin in a million is above 20 times the median
+    limit = (1 + 19 / np.sqrt(records)) * np.median(power, axis=-1, keepdims=True)
+    loud = np.any(power > limit, axis=0)
+    if not loud.any():
+        return noise
+    around = np.any([np.roll(loud, place) for place in range(-2, 3)], axis=0)
+    quiet: npt.NDArray[Any] = spectrum[..., ~around]
+    return quiet

@@ -240,6 +240,8 @@ def rebuild_start(
     measured = signals.acquired_points(fid)
     if points is None:
         points = max(0, math.floor(start / dwell + AT_ZERO))
+    if not points:
+        return fid.copy()
     if fit_points is None:
         fit_points = min(measured, 8 * coefficients)
     if not 2 * coefficients <= fit_points <= measured:
@@ -265,7 +267,7 @@ def rebuild_start(
         coords=fid.coords,  # type: ignore[arg-type]
         attributes=fid.attrs,
     )
-    if measured < fid.sizes["time"]:
+    if "acquired_points" in fid.attrs:
         result.attrs["acquired_points"] = measured + points
     return result
 
@@ -417,11 +419,11 @@ def _count(
     if (duration is None) == (points is None):
         got = "both" if points is not None else "neither"
         raise ParameterError(f"{where}: give {duration_name} or {points_name}; got {got}")
-    length, dwell = fid.sizes["time"], signals.dwell_time(fid)
+    dwell, measured = signals.dwell_time(fid), signals.acquired_points(fid)
     # a duration of three dwell times is three points whatever the last digit says
     count = points if points is not None else math.ceil(round((duration or 0) / dwell, 6))
-    removing = where == "remove_start"
-    low, high = (0, length - 2) if removing else (2, length)
+    # of zeros that were filled in any number may go, of measured points two must stay
+    low, high = (0, measured - 2) if where == "remove_start" else (2, fid.sizes["time"])
     if not low <= count <= high:
         name = duration_name if points is None else points_name
         got = f"{duration:g} s" if points is None else f"{points} points"
