@@ -15,6 +15,9 @@ from fidkit import steps as steps
 from fidkit.chain import Call as Call
 from fidkit.chain import Chain as Chain
 from fidkit.chain import chain_of as chain_of
+from fidkit.formats import from_universal as from_universal
+from fidkit.formats import read as read
+from fidkit.formats import write as write
 from fidkit.measure import measure as measure
 from fidkit.nuclei import NUCLEI as NUCLEI
 from fidkit.nuclei import field_from_frequency as field_from_frequency

@@ -1,0 +1,305 @@
+"""Reading and writing records: one file per open format behind `read` and `write`."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Mapping, Sequence
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import xarray as xr
+
+from fidkit import signals
+from fidkit.formats.record import Record
+from fidkit.params import FidkitError
+
+__all__ = ["from_universal", "read", "write"]
+
+KNOWN = (
+    "fidkit reads JCAMP-DX (.dx, .jdx), text tables (.csv, .txt), .npy, .npz, netCDF (.nc) and Zarr "
+    "(.zarr)"
+)
+TEXT_TABLE = (".csv", ".txt", ".tsv", ".dat")
+JCAMP = (".dx", ".jdx", ".jcm", ".jcamp")
+
+
+def read(
+    path: str | os.PathLike[str],
+    *,
+    dwell_time: float | None = None,
+    carrier_frequency: float | None = None,
+    nucleus: str | None = None,
+    time_start: float | None = None,
+    units: str | None = None,
+    sample: str | None = None,
+    coil: str | None = None,
+    dims: Sequence[str] | None = None,
+    block: int | None = None,
+    chunks: Any = None,
+) -> xr.DataArray:
+    """Read a record; the format is told by the content of the file, then by its suffix.
+
+    Parameters
+    ----------
+    path : path-like
+        File, or folder of a Zarr store.
+    dwell_time : float, optional
+        Time between points, s.
+    carrier_frequency : float, optional
+        Receiver frequency, Hz.
+    nucleus : str, optional
+        Name from `fidkit.NUCLEI`.
+    time_start : float, optional
+        Time of the first point since the middle of the pulse, s.
+    units, sample, coil : str, optional
+        Unit of the values, and free text.
+    dims : sequence of str, optional
+        Names of leading dimensions, for a file that does not name them.
+    block : int, optional
+        For a JCAMP-DX file of several data blocks: which one, from 1.
+    chunks : optional
+        For Zarr: stay lazy in blocks of this shape, as `xarray.open_zarr` takes them (needs dask).
+
+    Returns
+    -------
+    xarray.DataArray
+        FID or spectrum. Whatever was given here has won over what the file says. The attribute
+        ``notes`` tells what had to be assumed or was mended.
+
+    Raises
+    ------
+    FidkitError
+        If the file cannot be read, is damaged, or lacks something; it says what, and begins with
+        the name of the file.
+    """
+    path = Path(path)
+    given: dict[str, Any] = {
+        "dwell_time": dwell_time,
+        "carrier_frequency": carrier_frequency,
+        "nucleus": nucleus,
+        "time_start": time_start,
+        "units": units,
+        "sample": sample,
+        "coil": coil,
+        "dims": None if dims is None else (dims,) if isinstance(dims, str) else tuple(dims),
+    }
+    given = {name: value for name, value in given.items() if value is not None}
+    try:
+        kind = _kind(path)
+        for name, value, wanted in (("block", block, "JCAMP-DX"), ("chunks", chunks, "Zarr")):
+            if value is not None and kind != wanted:
+                raise FidkitError(f"{name} is for {wanted} only; this is {kind}")
+        if kind in ("netCDF", "Zarr"):
+            from fidkit.formats import archive
+
+            signal = archive.read(path, kind, chunks)
+            if given:
+                signal = _assemble(archive.as_record(signal), given, path.name, signal)
+            return signal
+        return _assemble(_reader(kind)(path, block), given, path.name)
+    except FidkitError as error:
+        raise type(error)(f"{path.name}: {error}") from error
+    except OSError as error:
+        raise FidkitError(f"{path.name}: cannot be read: {error.strerror or error}") from error
+    except MemoryError as error:
+        raise FidkitError(f"{path.name}: is larger than the memory; cut it into parts") from error
+
+
+def write(signal: xr.DataArray, path: str | os.PathLike[str]) -> Path:
+    """Write a record, whole or not at all; the suffix says in which format.
+
+    Parameters
+    ----------
+    signal : xarray.DataArray
+        FID or spectrum.
+    path : path-like
+        ``.nc`` and ``.zarr`` keep everything to the last bit; ``.npz`` keeps everything with which
+        `fidkit.from_array` makes a signal; ``.csv`` and ``.txt`` hold one record in full precision;
+        ``.dx`` and ``.jdx`` one record, rounded to 31 bits. What is there already is replaced.
+
+    Returns
+    -------
+    pathlib.Path
+        The file.
+
+    Raises
+    ------
+    FidkitError
+        If the suffix is not known or the format cannot hold this signal.
+    """
+    path = Path(path)
+    signals.is_fid(signal)
+    suffix = path.suffix.lower()
+    try:
+        if suffix in (".nc", ".zarr"):
+            from fidkit.formats import archive
+
+            archive.write(signal, path, "netCDF" if suffix == ".nc" else "Zarr")
+        elif suffix == ".npz":
+            from fidkit.formats import numpy_file
+
+            numpy_file.write(signal, path)
+        elif suffix in (".csv", ".txt"):
+            from fidkit.formats import text_table
+
+            text_table.write(signal, path)
+        elif suffix in (".dx", ".jdx"):
+            from fidkit.formats import jcamp
+
+            jcamp.write(signal, path)
+        else:
+            raise FidkitError(
+                "the suffix must be .nc, .zarr, .npz, .csv, .txt, .dx or .jdx; "
+                f"got {suffix or 'none'}"
+            )
+    except FidkitError as error:
+        raise type(error)(f"{path.name}: {error}") from error
+    except OSError as error:
+        raise FidkitError(f"{path.name}: cannot be written: {error.strerror or error}") from error
+    return path
+
+
+def from_universal(
+    universal: Mapping[Any, Any],
+    data: Any,
+    *,
+    carrier_frequency: float | None = None,
+    dwell_time: float | None = None,
+    nucleus: str | None = None,
+    dims: Sequence[str] | None = None,
+) -> xr.DataArray:
+    """Make a signal from nmrglue's universal dictionary and the array that belongs to it.
+
+    Parameters
+    ----------
+    universal : mapping
+        The dictionary, as ``guess_udic`` or ``create_blank_udic`` make it.
+    data : array_like, shape (..., points)
+        The array, or a list of a real and an imaginary one.
+    carrier_frequency, dwell_time, nucleus, dims
+        As in `read`; they win over the dictionary, whose placeholders count as missing.
+
+    Returns
+    -------
+    xarray.DataArray
+        FID or spectrum.
+
+    Raises
+    ------
+    FidkitError
+        If the dictionary does not fit the array, or lacks something that is not given here.
+    """
+    from fidkit.formats import universal_dictionary
+
+    given: dict[str, Any] = {
+        "carrier_frequency": carrier_frequency,
+        "dwell_time": dwell_time,
+        "nucleus": nucleus,
+        "dims": dims,
+    }
+    given = {name: value for name, value in given.items() if value is not None}
+    try:
+        return _assemble(universal_dictionary.read(universal, data), given, "")
+    except FidkitError as error:
+        raise type(error)(f"universal dictionary: {error}") from error
+
+
+def _kind(path: Path) -> str:
+    if path.is_dir():
+        if (path / "zarr.json").is_file():
+            return "Zarr"
+        raise FidkitError(f"is a folder, and no Zarr store (format 3); {KNOWN}")
+    with path.open("rb") as file:
+        head = file.read(65536)
+    if not head.strip():
+        raise FidkitError("the file is empty")
+    if head.startswith(b"\x93NUMPY"):
+        return ".npy"
+    if head.startswith(b"PK\x03\x04"):
+        return ".npz"
+    if head.startswith(b"\x89HDF\r\n\x1a\n"):
+        return "netCDF"
+    if head.startswith((b"CDF\x01", b"CDF\x02", b"CDF\x05")):
+        raise FidkitError("is netCDF of an older kind; fidkit reads netCDF-4, as it writes it")
+    suffix = path.suffix.lower()
+    if b"\0" not in head:
+        from fidkit.formats import jcamp, text_table
+        from fidkit.formats.record import text_of
+
+        text = text_of(head)
+        if jcamp.looks_like(text) or suffix in JCAMP:
+            return "JCAMP-DX"
+        if suffix in TEXT_TABLE or text_table.looks_like(text):
+            return "text table"
+    raise FidkitError(f"is of no format that fidkit knows; {KNOWN}")
+
+
+def _reader(kind: str) -> Callable[[Path, int | None], Record]:
+    from fidkit.formats import jcamp, numpy_file, text_table
+
+    return {
+        "JCAMP-DX": lambda path, block: jcamp.read(path, block=block),
+        "text table": lambda path, block: text_table.read(path),
+        ".npy": lambda path, block: numpy_file.read(path),
+        ".npz": lambda path, block: numpy_file.read(path),
+    }[kind]
+
+
+def _assemble(
+    record: Record, given: Mapping[str, Any], source: str, before: xr.DataArray | None = None
+) -> xr.DataArray:
+    """Let the caller's words win over the file's, ask for what is missing, and make the signal."""
+    notes = list(record.notes)
+    for name, value in given.items():
+        stated = getattr(record, name)
+        if stated is not None and stated != value:
+            notes.append(f"{name} {value!r} was given; the file says {stated!r}")
+        elif name != "dims":
+            notes.append(f"{name} {value!r} was given")
+        setattr(record, name, value)
+    is_fid = record.frequency is None
+    if record.carrier_frequency is None:
+        raise FidkitError("carrier_frequency is not in the file; pass carrier_frequency=<Hz>")
+    if is_fid and record.dwell_time is None:
+        raise FidkitError("dwell_time is not in the file; pass dwell_time=<s>")
+    if not is_fid and {"dwell_time", "time_start"} & given.keys():
+        raise FidkitError("holds a spectrum, which has no dwell_time or time_start to give")
+    if record.nucleus is None:
+        notes.append("the nucleus is not in the file; taken as 1H")
+    if is_fid and record.time_start is None:
+        notes.append("the time of the first point is not in the file; taken as 0 s after the pulse")
+    shared: dict[str, Any] = {
+        "carrier_frequency": record.carrier_frequency,
+        "nucleus": record.nucleus or "1H",
+        "units": record.units or "1",
+        "sample": record.sample or "",
+        "coil": record.coil or "",
+        "source": source,
+        "dims": record.dims,
+        "coords": record.coords,
+    }
+    reserved = {"history", "notes", "source", "long_name", *signals.SIGNAL_ATTRIBUTES, *shared}
+    more = {name: value for name, value in record.more.items() if name not in reserved}
+    if is_fid:
+        signal = signals.from_array(
+            record.values,
+            dwell_time=record.dwell_time,  # type: ignore[arg-type]
+            time_start=record.time_start or 0.0,
+            **shared,
+            **more,
+        )
+    else:
+        frequency = np.asarray(record.frequency, dtype=float)
+        if record.frequency_in_ppm:
+            frequency = frequency * float(record.carrier_frequency) * 1e-6
+        signal = signals.spectrum_from_array(record.values, frequency=frequency, **shared, **more)
+    for name in ("history", "notes", *signals.SIGNAL_ATTRIBUTES):
+        if name in record.more:
+            signal.attrs[name] = record.more[name]
+    if before is not None:
+        signal.name = before.name
+        signal.attrs["source"] = before.attrs.get("source", source)
+    for note in notes:
+        signals.add_note(signal, note)
+    return signal

@@ -1,0 +1,244 @@
+"""netCDF and Zarr, as fidkit writes them: everything comes back to the last bit.
+
+A complex signal is kept in netCDF as two variables, ``signal_real`` and ``signal_imaginary``, so
+that any other tool can open the file; Zarr has complex numbers of its own. What these formats
+cannot say (types of text, times and switches, what belongs to which) stands in the attribute
+``fidkit_layout`` as JSON.
+"""
+
+from __future__ import annotations
+
+import json
+import warnings
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import xarray as xr
+
+from fidkit import signals
+from fidkit.formats.record import Record, exact_spacing, replacing
+from fidkit.params import FidkitError
+
+__all__ = ["as_record", "read", "write"]
+
+LAYOUT = "fidkit_layout"
+SINCE = "since 1970-01-01"
+TICKS = {"s": "seconds", "ms": "milliseconds", "us": "microseconds", "ns": "nanoseconds"}
+
+
+def write(signal: xr.DataArray, path: Path, kind: str) -> None:
+    """Write a signal.
+
+    Parameters
+    ----------
+    signal : xarray.DataArray
+        FID or spectrum, also a lazy one.
+    path : pathlib.Path
+        File, or folder for Zarr.
+    kind : {'netCDF', 'Zarr'}
+        The format.
+
+    Raises
+    ------
+    FidkitError
+        If a coordinate or attribute is of no kind that the format can hold.
+    """
+    dataset = _packed(signal, split=kind == "netCDF")
+    with replacing(path) as target, warnings.catch_warnings():
+        # the way Zarr stores text is still to be put into its specification; it reads back
+        warnings.filterwarnings("ignore", message=".*Zarr V3 specification.*")
+        if kind == "netCDF":
+            dataset.to_netcdf(target, engine="h5netcdf", format="NETCDF4")
+        else:
+            dataset.to_zarr(target, zarr_format=3, consolidated=False)
+
+
+def read(path: Path, kind: str, chunks: Any = None) -> xr.DataArray:
+    """Read a signal that `write` wrote.
+
+    Parameters
+    ----------
+    path : pathlib.Path
+        File or folder.
+    kind : {'netCDF', 'Zarr'}
+        The format.
+    chunks : optional
+        For Zarr: stay lazy in blocks of this shape.
+
+    Returns
+    -------
+    xarray.DataArray
+        The signal.
+
+    Raises
+    ------
+    FidkitError
+        If the file was not written by fidkit or is damaged.
+    """
+    try:
+        with warnings.catch_warnings():
+            warnings.filterwarnings("ignore", message=".*Zarr V3 specification.*")
+            if kind == "netCDF":
+                with xr.open_dataset(path, engine="h5netcdf", decode_cf=False) as opened:
+                    dataset = opened.load()
+            else:
+                dataset = xr.open_dataset(
+                    path, engine="zarr", decode_cf=False, consolidated=False, zarr_format=3, chunks=chunks
+                )  # fmt: skip
+                if chunks is None:
+                    dataset = dataset.load()
+        layout = json.loads(dataset.attrs[LAYOUT])
+        signal = _unpacked(dataset, layout)
+    except (MemoryError, FidkitError):
+        raise
+    except KeyError as error:
+        raise FidkitError(
+            f"holds no {error.args[0] if error.args else 'signal'}; fidkit reads the {kind} that fidkit writes"
+        ) from None
+    except Exception as error:
+        reason = " ".join(str(error).split())[:160] or type(error).__name__
+        raise FidkitError(f"this {kind} cannot be read: {reason}; it may be damaged") from error
+    axis = np.asarray(signal[signal.dims[-1]].values, dtype=float)
+    signals.even_spacing(axis, str(signal.dims[-1]), "s" if signals.is_fid(signal) else "Hz")
+    return signal
+
+
+def as_record(signal: xr.DataArray) -> Record:
+    """Take a signal apart again, so that the caller's words can win over the file's."""
+    axis = np.asarray(signal[signal.dims[-1]].values, dtype=float)
+    more = dict(signal.attrs)
+    facts = {
+        name: more.pop(name, None)
+        for name in ("carrier_frequency", "nucleus", "units", "sample", "coil")
+    }
+    record = Record(
+        signal.values,
+        dims=tuple(str(name) for name in signal.dims),
+        coords=dict(signal.coords),  # type: ignore[arg-type]
+        more=more,
+        **facts,
+    )
+    if signals.is_fid(signal):
+        record.dwell_time, record.time_start = exact_spacing(axis), float(axis[0])
+    else:
+        record.frequency = axis
+    return record
+
+
+def _packed(signal: xr.DataArray, *, split: bool) -> xr.Dataset:
+    dims = [str(name) for name in signal.dims]
+    data = signal.variable
+    coordinates, types = {}, {}
+    for name, coordinate in signal.coords.items():
+        values = coordinate.values
+        types[str(name)] = values.dtype.str
+        attributes = dict(coordinate.attrs)
+        if values.dtype.kind in "mM":
+            unit, count = np.datetime_data(values.dtype)
+            if unit not in TICKS or count != 1:
+                raise FidkitError(
+                    f"coordinate {name} must count s, ms, us or ns; got {values.dtype}"
+                )
+            units = TICKS[unit] if values.dtype.kind == "m" else f"{TICKS[unit]} {SINCE}"
+            values, attributes = values.astype(np.int64), {**attributes, "units": units}
+        elif values.dtype.kind == "b":
+            values = values.astype(np.int8)
+        elif values.dtype.kind == "U":
+            values = values.astype(object)
+        elif values.dtype.kind not in "iuf":
+            raise FidkitError(
+                f"coordinate {name} must be numbers, text or times; got {values.dtype}"
+            )
+        coordinates[str(name)] = xr.Variable(
+            coordinate.dims, values, _attributes(attributes), {"_FillValue": None}
+        )
+    layout = {
+        "name": signal.name if signal.name is None else str(signal.name),
+        "dims": dims,
+        "type": str(signal.dtype),
+        "coordinates": types,
+        "attributes": {str(key): _attribute_type(value) for key, value in signal.attrs.items()},
+    }
+    told = {key: str(signal.attrs[key]) for key in ("units", "long_name") if key in signal.attrs}
+    parts = {"signal": data}
+    if split and signal.dtype.kind == "c":
+        parts = {"signal_real": data.real, "signal_imaginary": data.imag}
+    variables = {
+        name: xr.Variable(dims, part.data, dict(told), {"_FillValue": None})
+        for name, part in parts.items()
+    }
+    attributes = _attributes(signal.attrs)
+    return xr.Dataset(
+        variables,
+        coordinates,
+        {"Conventions": "CF-1.11", **attributes, LAYOUT: json.dumps(layout, ensure_ascii=False)},
+    )
+
+
+def _unpacked(dataset: xr.Dataset, layout: dict[str, Any]) -> xr.DataArray:
+    wanted = np.dtype(layout["type"])
+    if "signal" in dataset.variables:
+        data = dataset["signal"].variable.data
+    else:
+        real = dataset["signal_real"].variable.data
+        data = np.empty(real.shape, dtype=wanted)
+        data.real, data.imag = real, dataset["signal_imaginary"].variable.data
+    if data.dtype != wanted:
+        raise FidkitError(f"the signal must be {wanted}; got {data.dtype}; the file is damaged")
+    coordinates = {}
+    for name, kind in layout["coordinates"].items():
+        stored = dataset[name].variable
+        coordinate_type = np.dtype(kind)
+        if coordinate_type.kind not in "iufbUmM":
+            raise FidkitError(f"coordinate {name} is of a type that fidkit does not write: {kind}")
+        attributes = _restored(stored.attrs)
+        if coordinate_type.kind in "mM":
+            attributes.pop("units", None)
+        coordinates[name] = xr.Variable(
+            stored.dims, np.asarray(stored.values).astype(coordinate_type), attributes
+        )
+    attributes = {
+        key: _restored_value(dataset.attrs[key], kind) for key, kind in layout["attributes"].items()
+    }
+    for key in ("carrier_frequency", "nucleus"):
+        if key not in attributes:
+            raise KeyError(key)
+    return xr.DataArray(
+        data, dims=layout["dims"], coords=coordinates, attrs=attributes, name=layout["name"]
+    )
+
+
+def _attribute_type(value: Any) -> str:
+    if isinstance(value, bool):
+        return "switch"
+    if isinstance(value, np.generic):
+        return value.dtype.str
+    return "plain"
+
+
+def _attributes(attributes: Any) -> dict[str, Any]:
+    kept: dict[str, Any] = {}
+    for key, value in attributes.items():
+        if isinstance(value, bool | np.bool_):
+            kept[str(key)] = int(value)
+        elif isinstance(value, np.generic) and np.dtype(value.dtype).kind in "iuf":
+            kept[str(key)] = value.item()
+        elif isinstance(value, str | int | float):
+            kept[str(key)] = str(value) if isinstance(value, str) else value
+        else:
+            raise FidkitError(
+                f"attribute {key} must be text or a number to be written; got {type(value).__name__}"
+            )
+    return kept
+
+
+def _restored(attributes: Any) -> dict[str, Any]:
+    return {str(key): _restored_value(value, "plain") for key, value in attributes.items()}
+
+
+def _restored_value(value: Any, kind: str) -> Any:
+    plain = value.item() if isinstance(value, np.generic) else value
+    if kind == "plain":
+        return plain
+    return bool(plain) if kind == "switch" else np.dtype(kind).type(plain)

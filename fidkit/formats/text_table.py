@@ -1,0 +1,336 @@
+"""Text tables: ``# key: value`` lines, a line that names the columns with their unit, then numbers.
+
+::
+
+    # carrier_frequency_hz: 63.87e6
+    # nucleus: 1H
+    # sample: water phantom
+    time_s,real,imag
+    0.0001,0.52,-0.11
+    0.0002,0.49,-0.08
+
+Instead of a time column the line ``# dwell_time_s: ...`` will do. A spectrum has ``frequency_hz``.
+"""
+
+from __future__ import annotations
+
+import json
+import re
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+import xarray as xr
+
+from fidkit import signals
+from fidkit.files import write_whole
+from fidkit.formats.record import Record, exact_spacing, printed_unit, real_number, text_of
+from fidkit.params import FidkitError
+
+__all__ = ["looks_like", "read", "write"]
+
+UNITS = {
+    "s": 1.0,
+    "ms": 1e-3,
+    "us": 1e-6,
+    "µs": 1e-6,
+    "ns": 1e-9,
+    "hz": 1.0,
+    "khz": 1e3,
+    "mhz": 1e6,
+}
+AXIS = re.compile(r"(time)_(s|ms|us|µs|ns)|(frequency)_(hz|khz|mhz)")
+VALUES = re.compile(r"(real|imag|imaginary|signal)(?:_(\w+))?")
+#: Keys that are numbers with a unit in their name.
+MEASURED = re.compile(r"(carrier_frequency)_(hz|khz|mhz)|(dwell_time|time_start)_(s|ms|us|µs|ns)")
+BARE = ("carrier_frequency", "dwell_time", "time_start")
+COLUMNS = "such as time_s,real,imag or time_us,signal or frequency_hz,real"
+
+
+def looks_like(text: str) -> bool:
+    """Whether the first line that is no comment names columns that fidkit knows."""
+    for line in text.splitlines():
+        plain = line.strip()
+        if plain and not plain.startswith("#"):
+            names = [_name(part) for part in re.split(_delimiter(plain), plain)]
+            return any(AXIS.fullmatch(name) or VALUES.fullmatch(name) for name in names)
+    return False
+
+
+def _name(text: str) -> str:
+    """``Time [s]`` and ``time_s`` are the same."""
+    return re.sub(r"[\W_]+", "_", text.strip().strip('"').lower()).strip("_")
+
+
+def _delimiter(line: str) -> str:
+    for mark in (";", "\t", ","):
+        if mark in line:
+            return mark
+    return r"\s+"
+
+
+def read(path: Path) -> Record:
+    """Read a text table.
+
+    Parameters
+    ----------
+    path : pathlib.Path
+        The file.
+
+    Returns
+    -------
+    Record
+        Values and facts; the printed rounding of a time column has been allowed for.
+
+    Raises
+    ------
+    FidkitError
+        If a number, column or row is wrong; the line is named.
+    """
+    lines = [line.rstrip("\r") for line in text_of(path.read_bytes()).split("\n")]
+    record = Record(np.empty(0))
+    header: list[str] | None = None
+    delimiter = ","
+    rows: list[list[str]] = []
+    numbers: list[int] = []
+    for number, line in enumerate(lines, 1):
+        plain = line.strip()
+        if not plain:
+            continue
+        if plain.startswith("#"):
+            _key(plain.lstrip("# \t"), number, record)
+        elif header is None:
+            delimiter = _delimiter(plain)
+            header = [part.strip().strip('"') for part in re.split(delimiter, plain)]
+            columns = _columns(header, number)
+        else:
+            cells = re.split(delimiter, plain)
+            if len(cells) != len(header):
+                comma = plain.count(",") > plain.count(".") and delimiter != ","
+                remedy = "; write decimal points, not commas" if comma or delimiter == "," else ""
+                raise FidkitError(
+                    f"line {number}: has {len(cells)} columns where line 1 of the table names "
+                    f"{len(header)} ({', '.join(header)}){remedy}"
+                )
+            rows.append(cells)
+            numbers.append(number)
+    if header is None:
+        raise FidkitError(f"holds no table; a line must name the columns, {COLUMNS}")
+    if len(rows) < 2:
+        raise FidkitError(f"the table must have at least 2 rows; got {len(rows)}")
+    texts = list(zip(*rows, strict=True))
+
+    def column(name: str) -> npt.NDArray[np.float64]:
+        place = columns[name][0]
+        return np.array(
+            [
+                real_number(text, f"line {number}: {header[place]}")
+                for text, number in zip(texts[place], numbers, strict=True)
+            ]
+        )
+
+    if "signal" in columns:
+        record.values = column("signal")
+    elif "imag" in columns:
+        record.values = column("real") + 1j * column("imag")
+        record.values.imag = column("imag")  # an infinite or signed zero part survives only so
+    else:
+        record.values = column("real")
+    if record.more.pop("precision", "") == "single":
+        wanted = np.complex64 if np.iscomplexobj(record.values) else np.float32
+        record.values = record.values.astype(wanted)
+    value_units = {
+        unit for name, (_, unit) in columns.items() if name in ("real", "imag", "signal")
+    }
+    if len(value_units) > 1:
+        raise FidkitError(f"real and imag must have one unit; got {', '.join(sorted(value_units))}")
+    if value_units != {""}:
+        record.units = value_units.pop()
+    for name in ("time", "frequency"):
+        if name in columns:
+            place, unit = columns[name]
+            _axis(record, name, column(name), texts[place], UNITS[unit], numbers)
+    if record.frequency is not None and record.time_start is not None:
+        record.more["time_start"], record.time_start = record.time_start, None
+    return record
+
+
+def _key(text: str, number: int, record: Record) -> None:
+    key, colon, value = text.partition(":")
+    if not colon:
+        return
+    name, value = _name(key), value.strip()
+    measured = MEASURED.fullmatch(name)
+    if measured:
+        target, unit = (part for part in measured.groups() if part)
+        scale = UNITS[unit]
+        found = real_number(value, f"line {number}: {name}")
+        setattr(record, target, found * scale if scale != 1 else found)
+    elif name in BARE:
+        unit = "hz" if name == "carrier_frequency" else "s"
+        raise FidkitError(
+            f"line {number}: {name} must carry its unit in its name, such as {name}_{unit}; got {name}"
+        )
+    elif name in ("nucleus", "sample", "coil", "units"):
+        setattr(record, name, str(_plain(value)))
+    elif name not in ("source", "long_name"):
+        record.more[name] = _plain(value)
+
+
+def _plain(value: str) -> Any:
+    """A number where the text is one, text in quotes as JSON has it, or the text itself."""
+    if value.startswith('"'):
+        try:
+            return json.loads(value)
+        except (ValueError, RecursionError):
+            return value
+    if re.fullmatch(r"[+-]?\d{1,18}", value):
+        return int(value)
+    try:
+        number = float(value)
+    except ValueError:
+        return value
+    return number if np.isfinite(number) else value
+
+
+def _columns(header: list[str], number: int) -> dict[str, tuple[int, str]]:
+    """Place and unit by name: time, frequency, real, imag, signal."""
+    found: dict[str, tuple[int, str]] = {}
+    for place, text in enumerate(header):
+        name = _name(text)
+        axis, values = AXIS.fullmatch(name), VALUES.fullmatch(name)
+        if axis:
+            key, unit = (part for part in axis.groups() if part)
+        elif values:
+            key = {"imaginary": "imag"}.get(values[1], values[1])
+            # the unit as it was written: mV is not MV
+            unit = re.sub(r"[\W_]+", "_", text.strip()).strip("_")[len(values[1]) + 1 :]
+        else:
+            raise FidkitError(
+                f"line {number}: must name the columns, {COLUMNS}; got {text.strip()[:40]!r}"
+            )
+        if key in found:
+            raise FidkitError(f"line {number}: names {key} twice")
+        found[key] = (place, unit)
+    if ("signal" in found) == ("real" in found) or ("imag" in found and "real" not in found):
+        raise FidkitError(f"line {number}: must name real (and imag), or signal; {COLUMNS}")
+    if "time" in found and "frequency" in found:
+        raise FidkitError(f"line {number}: must name time or frequency, not both")
+    return found
+
+
+def _axis(
+    record: Record,
+    name: str,
+    axis: npt.NDArray[np.float64],
+    texts: tuple[str, ...],
+    scale: float,
+    numbers: list[int],
+) -> None:
+    """Check that an axis is even as far as its digits go, and put it into the record."""
+    span = float(axis[-1] - axis[0])
+    stated = record.dwell_time if name == "time" else None
+    step = span / (axis.size - 1) if stated is None else stated / scale
+    if not span or (name == "time" and span < 0):
+        raise FidkitError(
+            f"{name} must ascend evenly; it runs from {texts[0]} to {texts[-1]} in the table"
+        )
+    # what one printed digit is worth, row by row: either decimals or digits are the same in all
+    places = np.array([printed_unit(text) for text in texts])
+    digits = max(len(re.sub(r"^[+-]?0*\.?0*|[eE].*$|\.", "", text.strip())) for text in texts)
+    with np.errstate(divide="ignore"):
+        leading = np.floor(np.log10(np.abs(axis), where=axis != 0, out=np.full(axis.size, -np.inf)))
+    unit = np.maximum(np.nanmin(places), 10.0 ** (leading + 1 - digits))
+    line = axis[0] + step * np.arange(axis.size)
+    rounding = 8 * np.finfo(float).eps * float(np.abs(axis[[0, -1]]).max())
+    wrong = np.abs(axis - line) > 1.01 * unit + rounding
+    if wrong.any():
+        row = int(np.argmax(wrong))
+        if stated is not None:
+            raise FidkitError(
+                f"line {numbers[row]}: {name} is {texts[row].strip()}, but dwell_time_s makes it "
+                f"{line[row]:.8g}; correct one of them"
+            )
+        steps = np.diff(axis)
+        worst = int(np.argmax(np.abs(steps - np.median(steps))))
+        raise FidkitError(
+            f"{name} must be evenly spaced; line {numbers[worst + 1]} steps by {steps[worst]:.6g} where "
+            f"{np.median(steps):.6g} is usual; rows are missing or the record must be resampled first"
+        )
+    if name == "frequency":
+        exact = np.abs(np.diff(axis) - step).max() <= signals.EVEN_SPACING * abs(step)
+        record.frequency = (axis if exact else line) * scale
+        return
+    known = float(unit[[0, -1]].sum() / 2 / span)
+    if stated is None and known > 1e-6:
+        record.notes.append(
+            f"the dwell time is stated to {known:.1e} of itself only, by the digits printed"
+        )
+    record.dwell_time = (exact_spacing(axis) if stated is None else step) * scale
+    if stated is not None:
+        record.dwell_time = stated
+    if record.time_start is None:
+        record.time_start = float(axis[0]) * scale
+    elif abs(record.time_start - axis[0] * scale) > (1.01 * unit[0] + rounding) * scale:
+        raise FidkitError(
+            f"line {numbers[0]}: time begins at {texts[0].strip()}, but time_start_s says "
+            f"{record.time_start:g} s; correct one of them"
+        )
+
+
+def write(signal: xr.DataArray, path: Path) -> None:
+    """Write one record as a comma-separated table; every number reads back as it was.
+
+    Parameters
+    ----------
+    signal : xarray.DataArray, shape (points,)
+        FID or spectrum.
+    path : pathlib.Path
+        File to write.
+
+    Raises
+    ------
+    FidkitError
+        For more than one record.
+    """
+    if signal.ndim != 1:
+        raise FidkitError(
+            f"a text table holds one record; got dimensions {signal.dims}; choose one with .isel, "
+            "or write .nc or .zarr"
+        )
+    values = np.asarray(signal.values)
+    axis = np.asarray(signal[signal.dims[-1]].values, dtype=float)
+    head = []
+    for key, value in signal.attrs.items():
+        if key == "carrier_frequency":
+            head.append(f"# carrier_frequency_hz: {float(value)!r}")
+        elif key == "time_start":
+            head.append(f"# time_start_s: {float(value)!r}")
+        elif key not in ("source", "long_name") and value != "":
+            head.append(f"# {key}: {_written(value)}")
+    if values.dtype in (np.complex64, np.float32):
+        head.append("# precision: single")
+    is_fid = signals.is_fid(signal)
+    if is_fid:
+        head.append(f"# dwell_time_s: {exact_spacing(axis)!r}")
+        head.append(f"# time_start_s: {float(axis[0])!r}")
+    names = ["time_s" if is_fid else "frequency_hz", "real"]
+    columns = [axis.tolist(), _texts(values.real)]
+    if np.iscomplexobj(values):
+        names.append("imag")
+        columns.append(_texts(values.imag))
+    rows = (",".join([repr(x), *y]) for x, *y in zip(*columns, strict=True))
+    write_whole(path, ("\n".join([*head, ",".join(names), *rows]) + "\n").encode())
+
+
+def _texts(values: npt.NDArray[Any]) -> list[str]:
+    """The shortest text of every number that reads back as the same number."""
+    return [str(value) for value in values]
+
+
+def _written(value: object) -> str:
+    if isinstance(value, str):
+        plain = value.strip() == value and value.isprintable() and not value.startswith('"')
+        return value if plain and _plain(value) == value else json.dumps(value, ensure_ascii=False)
+    return repr(value.item() if isinstance(value, np.generic) else value)
