@@ -467,7 +467,7 @@ def test_rebuilt_points_agree_with_an_independent_library() -> None:
     rng = np.random.default_rng(2)
     time = np.arange(300) * DWELL
     whole = decay(time, 300.0) + 0.5 * decay(time, -1200.0, 0.02)
-    # as many lines as coefficients, so that neither side truncates
+    # as many lines as coefficients: nothing to cut off, which the library never does
     values = whole[4:]
     theirs = proc_lp.lp(
         values,

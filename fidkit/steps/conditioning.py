@@ -232,8 +232,9 @@ def rebuild_start(
     ``s[n] = sum_k a[k] s[n + k]``, ``k = 1 ... coefficients``, by least squares with a truncated
     singular value decomposition (Kumaresan and Tufts, IEEE Trans. Acoust. Speech Signal Process.
     30, 833 (1982)); singular values below the hard threshold of Gavish and Donoho, IEEE Trans.
-    Inf. Theory 60, 5040 (2014), for unknown noise are left out. Both from memory. Each rebuilt
-    point leans on the one after it, so noise grows with their number.
+    Inf. Theory 60, 5040 (2014), are left out, the noise taken from the fitted points themselves.
+    Both from memory. Each rebuilt point leans on the ones after it, so errors grow with their
+    number.
     """
     where = "rebuild_start"
     dwell, start = signals.dwell_time(fid), signals.time_start(fid)
@@ -559,7 +560,8 @@ def _decays(
     width = min(record.size // 3, 100)
     hankel = np.lib.stride_tricks.sliding_window_view(record, width + 1)
     _, singular, right = np.linalg.svd(hankel, full_matrices=False)
-    kept = right[: _above_noise(singular, hankel.shape)].T
+    sigma = _noise_level(singular, hankel.shape)
+    kept = right[: _above_noise(singular, hankel.shape, sigma)].T
     poles = np.linalg.eigvals(np.linalg.pinv(kept[:-1]) @ kept[1:])
     poles = poles[(np.abs(poles) < 1.0005) & (np.abs(poles) > 0.5)]
     rates = np.log(poles)
@@ -569,21 +571,36 @@ def _decays(
 
 
 def _backward_prediction(known: npt.NDArray[Any], coefficients: int) -> npt.NDArray[Any]:
+    # the noise from a matrix wide enough that most of its singular values are noise
+    wide = np.lib.stride_tricks.sliding_window_view(known, max(2, min(known.size // 3, 100)))
+    sigma = _noise_level(np.linalg.svd(wide, compute_uv=False), wide.shape)
     after = np.lib.stride_tricks.sliding_window_view(known[1:], coefficients)
     left, singular, right = np.linalg.svd(after, full_matrices=False)
-    kept = _above_noise(singular, after.shape)
+    kept = _above_noise(singular, after.shape, sigma)
     scaled = (left[:, :kept].conj().T @ known[: after.shape[0]]) / singular[:kept]
     prediction: npt.NDArray[Any] = right[:kept].conj().T @ scaled
     return prediction
 
 
-def _above_noise(singular: npt.NDArray[np.float64], shape: tuple[int, ...]) -> int:
-    """How many singular values are signal: hard threshold for unknown noise, Gavish and Donoho."""
-    ratio = min(shape) / max(shape)
-    factor = 0.56 * ratio**3 - 0.95 * ratio**2 + 1.82 * ratio + 1.43
+def _above_noise(singular: npt.NDArray[np.float64], shape: tuple[int, ...], sigma: float) -> int:
+    """How many singular values are signal: hard threshold of Gavish and Donoho."""
     # a record without noise leaves rounding, which is smaller than this
     floor = singular[0] * max(shape) * np.finfo(np.float64).eps
-    return int(np.sum(singular > max(factor * float(np.median(singular)), floor)))
+    return int(np.sum(singular > max(_threshold(shape) * sigma, floor)))
+
+
+def _threshold(shape: tuple[int, ...]) -> float:
+    """Threshold for noise of unit standard deviation: Gavish and Donoho."""
+    ratio = min(shape) / max(shape)
+    square = 2 * (ratio + 1) + 8 * ratio / (ratio + 1 + math.sqrt(ratio**2 + 14 * ratio + 1))
+    return math.sqrt(square * max(shape))
+
+
+def _noise_level(singular: npt.NDArray[np.float64], shape: tuple[int, ...]) -> float:
+    """Standard deviation of the noise in a matrix whose singular values are mostly noise."""
+    ratio = min(shape) / max(shape)
+    factor = 0.56 * ratio**3 - 0.95 * ratio**2 + 1.82 * ratio + 1.43
+    return factor * float(np.median(singular)) / _threshold(shape)
 
 
 def _moments(values: npt.NDArray[Any], where: str) -> tuple[npt.NDArray[Any], npt.NDArray[Any]]:
