@@ -12,6 +12,9 @@ import xarray as xr
 from fidkit import signals
 from fidkit.params import FidkitError, Gives, Range, Slider, step
 
+#: How far a frequency axis may be off the transform's own grid by rounding, in points.
+GRID_ROUNDING = 1e-3
+
 
 @step
 def zero_fill(
@@ -112,9 +115,8 @@ def fourier_transform(
         coords=fid.coords,  # type: ignore[arg-type]
         attributes=fid.attrs,
     )
-    units = fid.attrs.get("units", "1")
     result.attrs |= {
-        "units": "s" if units == "1" else f"{units} s",
+        "units": _per(str(fid.attrs.get("units", "1")), "s-1", "s"),
         "time_start": start,
         "first_point": first_point,
         "acquired_points": signals.acquired_points(fid),
@@ -129,7 +131,8 @@ def inverse_transform(spectrum: xr.DataArray) -> Annotated[xr.DataArray, Gives("
     Returns
     -------
     xarray.DataArray
-        The FID on its true times; zeros that were filled in are still there.
+        The FID on its true times; zeros that were filled in are still there. Phase that was applied
+        to the spectrum is in its values, and no longer booked.
 
     Raises
     ------
@@ -138,23 +141,41 @@ def inverse_transform(spectrum: xr.DataArray) -> Annotated[xr.DataArray, Gives("
     """
     signals.require_complex(spectrum, "inverse_transform")
     frequency = spectrum["frequency"].values
-    dwell = 1 / signals.spectral_width(spectrum)
+    width = signals.spectral_width(spectrum)
     start = float(spectrum.attrs.get("time_start", 0.0))
-    values = spectrum.values * np.exp(2j * np.pi * frequency * start).astype(spectrum.dtype)
-    # a spectrum from elsewhere may have any frequency at index 0; what is left is a plain shift
-    shift = -round(frequency[0] / (frequency[1] - frequency[0]))
-    fid = scipy.fft.ifft(np.roll(values, -shift, axis=-1), axis=-1)
-    fid /= fid.real.dtype.type(dwell)
+    values = spectrum.values
+    if start:
+        values = values * np.exp(2j * np.pi * frequency * start).astype(values.dtype)
+    # a spectrum from elsewhere may begin at any frequency: whole points are a turn of the array,
+    # what is left is a shift of the FID's frequency
+    lowest = frequency[0] / width * frequency.size
+    turn = round(lowest)
+    fid = scipy.fft.ifft(np.roll(values, turn, axis=-1), axis=-1, overwrite_x=True)
+    fid *= fid.real.dtype.type(width)
+    if abs(lowest - turn) > GRID_ROUNDING:
+        index = np.arange(frequency.size)
+        left = (lowest - turn) / frequency.size
+        fid *= np.exp(2j * np.pi * left * index).astype(fid.dtype)
     if spectrum.attrs.get("first_point") == "half":
         fid[..., 0] *= 2
+    # the phase that was applied is in the data now
+    kept = spectrum.drop_vars(["applied_phase", "applied_delay"], errors="ignore")
     result = signals.fid_array(
         fid,
-        dwell=dwell,
+        dwell=1 / width,
         start=start,
         dims=spectrum.dims[:-1],  # type: ignore[arg-type]
-        coords=spectrum.coords,  # type: ignore[arg-type]
+        coords=kept.coords,  # type: ignore[arg-type]
         attributes=spectrum.attrs,
     )
-    units = str(spectrum.attrs.get("units", "1"))
-    result.attrs["units"] = "1" if units == "s" else units.removesuffix(" s")
+    result.attrs["units"] = _per(str(spectrum.attrs.get("units", "1")), "s", "s-1")
     return result
+
+
+def _per(units: str, undone: str, unit: str) -> str:
+    """A CF unit times `unit`, which is the inverse of `undone`."""
+    if units == undone:
+        return "1"
+    if units.endswith(f" {undone}"):
+        return units.removesuffix(f" {undone}")
+    return unit if units == "1" else f"{units} {unit}"
