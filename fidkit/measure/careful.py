@@ -90,7 +90,9 @@ def with_care(
     points, resolution = values.size, 1 / (values.size * record.dwell)
     allowed = allowed_points(points, record.dwell, wanted.region)
 
-    def look(fit: Crowd, among: npt.NDArray[np.bool_] | None) -> tuple[float, float, float]:
+    def look(
+        fit: Crowd, among: npt.NDArray[np.bool_] | None, *, narrow: bool = False
+    ) -> tuple[float, float, float]:
         rest = values - numerics.model_in_time(fit, points, record.dwell, record.start).sum(axis=0)
         found = numerics.search(
             rest[None] - constant_offset(rest[None]), record.dwell, allowed=among
@@ -101,7 +103,9 @@ def with_care(
         model = _Model((frequency,), (rate,), named=1, offset=offset)
         fit, band = _fit(record, spectrum, model)
         while model.named < wanted.lines:
-            frequency, rate, energy = look(fit, allowed)
+            frequency, rate, energy = look(fit, allowed, narrow=True)
+            if energy < WEAK_ENERGY:
+                frequency, rate, energy = look(fit, allowed)
             if energy < WEAK_ENERGY:
                 break
             model = model.with_line(frequency, rate, named=True)
@@ -208,8 +212,9 @@ def _make_composite(line: Line, fit: Crowd, members: list[int]) -> None:
 
 
 def _decays(fit: Crowd, resolution: float) -> bool:
-    """Whether the first line falls to 1/e within the record."""
-    return bool(fit.rate[0] > resolution or fit.gaussian > resolution**2)
+    """Whether the first line surely decays: a steady tone does so by no more than its noise."""
+    surely = fit.rate[0] > max(3 * np.sqrt(fit.covariance[1, 1]), 0.05 * resolution)
+    return bool(surely or fit.gaussian > resolution**2)
 
 
 def _fit(

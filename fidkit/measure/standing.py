@@ -28,49 +28,64 @@ def measure_standing(
             f"measure: region {wanted.region} Hz holds no point of the spectrum, whose points are "
             f"{spacing:.3g} Hz apart; widen it"
         )
-    quiet, quiet_share = _quiet_noise(values, frequency, wanted.noise)
-    places: list[float] = []
-    rates: list[float] = []
-    rest = values
+    quiet, share = _quiet_noise(values, frequency, wanted.noise)
+    fit = _fit(values, frequency, allowed, wanted, quiet)
+    turned = False
+    if fit is not None and np.iscomplexobj(values):
+        # files differ in the sign of the imaginary part; a decay tells which one is right
+        other = _fit(values.conj(), frequency, allowed, wanted, quiet)
+        if other is not None and other.noise < fit.noise:
+            fit, values, turned = other, values.conj(), True
+    found = []
+    for place in range(0 if fit is None else fit.frequency.size):
+        assert fit is not None
+        line = _standing_line(fit, place, values, frequency, quiet, share)
+        if turned:
+            line.notes.append("its imaginary part has the other sign")
+        found.append(line)
+    found.sort(key=lambda line: line.frequency)
+    return found + [nothing() for _ in range(wanted.lines - len(found))]
+
+
+def _fit(
+    values: npt.NDArray[Any],
+    frequency: npt.NDArray[Any],
+    allowed: npt.NDArray[np.bool_],
+    wanted: Wanted,
+    quiet: float,
+) -> Crowd | None:
+    """The lines asked for, fitted together, highest first; None where there is none."""
+    spacing = (frequency[-1] - frequency[0]) / (frequency.size - 1)
+    shapes = numerics.shapes_of_spectrum
     fit: Crowd | None = None
-    used = allowed
+    places, rates = np.empty(0), np.empty(0)
+    rest = values
     for _ in range(wanted.lines):
-        height = np.abs(rest) if np.iscomplexobj(rest) else rest
-        peak = _peak(height, frequency, allowed, wanted.near if not places else None, quiet)
+        height = np.abs(rest)
+        peak = _peak(height, frequency, allowed, None if places.size else wanted.near, quiet)
         if peak is None:
             break
-        half = np.flatnonzero(height < height[peak] / 2)
-        below, above = half[half < peak], half[half > peak]
+        low = np.flatnonzero(height < height[peak] / 2)
+        below, above = low[low < peak], low[low > peak]
         left = below[-1] if below.size else 0
         right = above[0] if above.size else frequency.size - 1
-        # a magnitude line is sqrt(3) wider than an absorption line
+        # the magnitude of a line is sqrt(3) wider than its absorption
         width = (right - left) * spacing / (np.sqrt(3) if np.iscomplexobj(rest) else 1)
-        places.append(float(frequency[peak]))
-        rates.append(float(np.pi * width))
-        used = np.zeros(frequency.size, bool)
-        for place, rate in zip(places, rates, strict=True):
-            reach = max(numerics.BAND_WIDTHS * rate / np.pi, 16 * spacing)
-            used |= np.abs(frequency - place) <= reach
+        places, rates = np.append(places, frequency[peak]), np.append(rates, np.pi * width)
+        reach = np.maximum(numerics.BAND_WIDTHS * rates / np.pi, 16 * spacing)
+        used = (np.abs(frequency[:, None] - places) <= reach).any(axis=1)
         fit = numerics.fit_crowd(
             values[used],
-            numerics.shapes_of_spectrum(frequency[used]),
-            np.array(places),
-            np.array(rates),
+            shapes(frequency[used]),
+            places,
+            rates,
             resolution=spacing,
             columns=np.ones((int(used.sum()), 1), complex),
         )
-        places, rates = list(fit.frequency), list(fit.rate)
-        plain = numerics.shapes_of_spectrum(frequency)(2j * np.pi * fit.frequency - fit.rate, 0.0)[
-            0
-        ]
-        model = plain @ fit.scale
+        places, rates = fit.frequency, fit.rate
+        model = shapes(frequency)(2j * np.pi * places - rates, 0.0)[0] @ fit.scale
         rest = values - (model if np.iscomplexobj(values) else model.real)
-    found = []
-    for place in range(len(places)):
-        assert fit is not None
-        found.append(_standing_line(fit, place, values, frequency, quiet, quiet_share))
-    found.sort(key=lambda line: line.frequency)
-    return found + [nothing() for _ in range(wanted.lines - len(found))]
+    return fit
 
 
 def _standing_line(
@@ -79,7 +94,7 @@ def _standing_line(
     values: npt.NDArray[Any],
     frequency: npt.NDArray[Any],
     quiet: float,
-    quiet_share: float,
+    share: float,
 ) -> Line:
     scale = complex(fit.scale[place])
     amplitude, phase = abs(scale), float(np.angle(scale))
@@ -92,7 +107,7 @@ def _standing_line(
     within = np.abs(frequency - fit.frequency[place]) <= max(
         abs(width), frequency[1] - frequency[0]
     )
-    top = np.abs(values[within]) if np.iscomplexobj(values) else values[within]
+    top = np.abs(values[within])
     line = Line(
         frequency=float(fit.frequency[place]),
         frequency_std=float(np.sqrt(covariance[2 * place, 2 * place])),
@@ -106,7 +121,7 @@ def _standing_line(
     )
     if top.size and quiet > 0:
         line.snr = float(top.max() / quiet)
-        line.snr_std = float(np.hypot(1.0, line.snr * quiet_share))
+        line.snr_std = float(np.hypot(1.0, line.snr * share))
     as_it_stands = "doubtful: as the spectrum stands, with any apodization"
     line.status = dict.fromkeys(("linewidth", "linewidth_ppm", "t2_star"), as_it_stands)
     line.status["t2_star_decay"] = "missing: there is no decay behind this spectrum"
