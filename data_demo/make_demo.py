@@ -3,9 +3,9 @@
 Three loop coils of our own, one after the other over the same round water phantom at 63.87 MHz:
 
 loop_40mm.dx            well shimmed, quiet (JCAMP-DX)
-loop_40mm_repeats.nc    the same coil, eight shots while the field drifts (netCDF)
-loop_60mm_poor_shim.csv the phantom off centre, so the line is broad and lopsided (text table)
-loop_80mm_noisy.nc      an open cable: noise, mains pick-up, DC offset, long dead time (netCDF)
+loop_40mm_shots.nc      the same coil, eight shots while the field drifts (netCDF)
+loop_60mm_shim.csv      the phantom off centre, so the line is broad and lopsided (text table)
+loop_80mm_noisy.npz     an open cable: noise, mains pick-up, DC offset, long dead time (numpy)
 bench_check.py          a chain of steps for all of them, for `fidkit measure --chain`
 
 Run it again with `python data_demo/make_demo.py [FOLDER]`: the same files come out.
@@ -77,7 +77,7 @@ def session() -> dict[str, xr.DataArray]:
         source="simulated",
     )
     poor_shim = record(
-        sphere_sample(offset=-212.0, linear=22.0, quadratic=14.0, amplitude=0.7, t1=0.12, t2=0.05),
+        sphere_sample(offset=-212.0, linear=14.0, quadratic=5.0, amplitude=0.7, t1=0.12, t2=0.05),
         "loop 60 mm",
         seed=601,
         points=2048,
@@ -98,9 +98,9 @@ def session() -> dict[str, xr.DataArray]:
     )
     return {
         "loop_40mm.dx": clean,
-        "loop_40mm_repeats.nc": repeats,
-        "loop_60mm_poor_shim.csv": poor_shim,
-        "loop_80mm_noisy.nc": noisy,
+        "loop_40mm_shots.nc": repeats,
+        "loop_60mm_shim.csv": poor_shim,
+        "loop_80mm_noisy.npz": noisy,
     }
 
 

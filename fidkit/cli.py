@@ -43,19 +43,18 @@ FOLDER_RULE = (
     f"pictures ({' '.join(NO_RECORD_SUFFIXES)})."
 )
 
-#: Quantities in the order of JSON and CSV, and those of the table with their two lines of heading.
+#: Quantities in the order of JSON and CSV, and those that the table has room for with their heading.
 QUANTITIES = (
     *("frequency_offset", "frequency_offset_ppm", "linewidth", "linewidth_ppm"),
     *("t2_star", "t2_star_decay", "field", "amplitude", "phase", "snr"),
 )
 TABLE = {
-    "frequency_offset": "offset",
-    "linewidth": "linewidth",
-    "t2_star": "T2* (width)",
-    "t2_star_decay": "T2* (decay)",
-    "amplitude": "amplitude",
-    "phase": "phase",
-    "snr": "SNR",
+    "frequency_offset": ("", "offset"),
+    "linewidth": ("", "linewidth"),
+    "t2_star": ("T2* of", "width"),
+    "t2_star_decay": ("T2* of", "decay"),
+    "amplitude": ("", "amplitude"),
+    "snr": ("", "SNR"),
 }
 UNIT_IN_NAME = {"Hz": "_hz", "ppm": "_ppm", "s": "_s", "T": "_tesla", "degree": "_degree", "1": ""}
 
@@ -135,6 +134,7 @@ def _parser() -> argparse.ArgumentParser:
     group = facts.add_argument_group("what the files themselves do not say")
     group.add_argument("--carrier-frequency", type=float, metavar="HZ", help="receiver frequency")
     group.add_argument("--dwell-time", type=float, metavar="S", help="time between points")
+    group.add_argument("--block", type=int, metavar="N", help="which of several JCAMP-DX blocks")
     group.add_argument("--nucleus", metavar="NAME", help=f"one of {', '.join(fidkit.NUCLEI)}")
 
     measure = commands.add_parser(
@@ -143,7 +143,7 @@ def _parser() -> argparse.ArgumentParser:
         help="measure the line in each record",
         description="Measure the strongest line of each record, or the one asked for.",
         epilog=f"{FOLDER_RULE} Numbers read 137.41(2): the bracket is one standard uncertainty of "
-        "the last digits. Exit status 1 if a record could not be measured.",
+        "the last digits. CSV and JSON hold all digits, and also phase, field and ppm. Exit status 1 if a record could not be measured.",
     )
     measure.add_argument("paths", nargs="+", metavar="PATH", help="record, or folder of records")
     measure.add_argument("--chain", metavar="FILE", help="saved chain of steps to take first")
@@ -269,7 +269,7 @@ def _is_store(path: Path) -> bool:
 
 
 def _facts(options: argparse.Namespace) -> dict[str, Any]:
-    names = ("carrier_frequency", "dwell_time", "nucleus")
+    names = ("carrier_frequency", "dwell_time", "nucleus", "block")
     return {name: value for name in names if (value := getattr(options, name)) is not None}
 
 
@@ -447,26 +447,26 @@ def _grid(results: Sequence[Result], width: int) -> list[str]:
             number_text(q.value * factor, q.std * factor) + (f" {q.unit}" if own else "")
             for q in quantities
         ]
-        columns.append(_numbers([heading, unit], cells))
+        columns.append(_numbers([*heading, unit], cells))
     numbers = ["  ".join(parts) for parts in zip(*columns, strict=True)]
     status = [_status(result) for result in results]
     side_by_side = len(label[0]) + 2 + len(numbers[0])
-    if side_by_side + 2 + LEAST_STATUS <= width:
+    if side_by_side + 2 + min(LEAST_STATUS, max(map(len, ["status", *status]))) <= width:
         room = width - side_by_side - 2
+        heading = ("", "status", "")
         lines = [
-            f"{label[0]}  {numbers[0]}  status",
-            f"{label[1]}  {numbers[1]}",
+            f"{left}  {middle}  {words}"
+            for left, middle, words in zip(label, numbers, heading, strict=False)
         ]
-        for left, middle, words in zip(label[2:], numbers[2:], status, strict=True):
+        for left, middle, words in zip(label[3:], numbers[3:], status, strict=True):
             first, *more = textwrap.wrap(words, room) or [""]
             lines.append(f"{left}  {middle}  {first}")
             lines += [" " * (side_by_side + 2) + line for line in more]
     else:  # a narrow terminal: the words get a line of their own above the numbers
-        lines = [f"  {numbers[0]}", f"  {numbers[1]}"]
-        for left, middle, words in zip(label[2:], numbers[2:], status, strict=True):
-            lines += textwrap.wrap(
-                f"{' '.join(left.split())}: {words}", width, subsequent_indent="    "
-            )
+        lines = [f"  {line}" for line in numbers[:3]]
+        for result, middle, words in zip(results, numbers[3:], status, strict=True):
+            head = [result.source, *(f"{key} {_plain(at)}" for key, at in result.where.items())]
+            lines += textwrap.wrap(f"{', '.join(head)}: {words}", width, subsequent_indent="    ")
             lines.append(f"  {middle}")
     return [line.rstrip() for line in lines]
 
@@ -480,8 +480,9 @@ def _status(result: Result) -> str:
 
 
 def _texts(heading: Sequence[str], rows: Sequence[Sequence[str]]) -> list[str]:
-    """Words to the left; an empty second line of heading."""
-    lines = [list(heading), [""] * len(heading), *map(list, rows)]
+    """Words to the left, under a heading in the second of three lines."""
+    empty = [""] * len(heading)
+    lines = [empty, list(heading), empty, *map(list, rows)]
     widths = [max(map(len, column)) for column in zip(*lines, strict=True)]
     return [
         "  ".join(text.ljust(wide) for text, wide in zip(line, widths, strict=True))
@@ -592,8 +593,8 @@ def _description(name: str, signal: xr.DataArray) -> str:
             ("spectral width", _exact(signals.spectral_width(signal), "Hz")),
         ]
     if signal.ndim > 1:
-        leading = [f"{size} {dim}" for dim, size in signal.sizes.items()][:-1]
-        rows.insert(1, ("records", " x ".join(leading)))
+        leading = [f"{dim}: {size}" for dim, size in signal.sizes.items()][:-1]
+        rows.insert(1, ("records", ", ".join(leading)))
     field_here = fidkit.field_from_frequency(carrier, nucleus)
     rows += [
         ("carrier", f"{carrier / 1e6:.9g} MHz, {nucleus} in about {field_here:.6g} T"),
@@ -635,7 +636,7 @@ def _steps(options: argparse.Namespace) -> int:
             step = fidkit.params.find_step(name)
             lines += [f"{step.name}: {step.takes} to {step.gives}", ""]
             lines += (inspect.getdoc(step.function) or "").splitlines()
-            lines += ["", *_parameter_lines(step, width), ""]
+            lines += ["", "Allowed", "-------", *_parameter_lines(step, width), ""]
     else:
         rooms: dict[str, list[fidkit.params.Step]] = {}
         for step in fidkit.STEPS.values():
