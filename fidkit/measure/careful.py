@@ -90,9 +90,7 @@ def with_care(
     points, resolution = values.size, 1 / (values.size * record.dwell)
     allowed = allowed_points(points, record.dwell, wanted.region)
 
-    def look(
-        fit: Crowd, among: npt.NDArray[np.bool_] | None, *, narrow: bool = False
-    ) -> tuple[float, float, float]:
+    def look(fit: Crowd, among: npt.NDArray[np.bool_] | None) -> tuple[float, float, float]:
         rest = values - numerics.model_in_time(fit, points, record.dwell, record.start).sum(axis=0)
         found = numerics.search(
             rest[None] - constant_offset(rest[None]), record.dwell, allowed=among
@@ -101,11 +99,15 @@ def with_care(
 
     def grow(frequency: float, rate: float) -> tuple[_Model, Crowd, Band]:
         model = _Model((frequency,), (rate,), named=1, offset=offset)
+        if wanted.lines > 1:
+            # all peaks at once: one by one, the first would widen until it covers the others
+            peaks = _peaks(values, record.dwell, wanted.lines, allowed)
+            if len(peaks) > 1:
+                rates = (2 * resolution,) * len(peaks)
+                model = replace(model, frequency=peaks, rate=rates, named=len(peaks))
         fit, band = _fit(record, spectrum, model)
         while model.named < wanted.lines:
-            frequency, rate, energy = look(fit, allowed, narrow=True)
-            if energy < WEAK_ENERGY:
-                frequency, rate, energy = look(fit, allowed)
+            frequency, rate, energy = look(fit, allowed)
             if energy < WEAK_ENERGY:
                 break
             model = model.with_line(frequency, rate, named=True)
@@ -179,6 +181,24 @@ def with_care(
     if model.offset:
         others = others + fit.linear[-1]
     return lines, others + tone
+
+
+def _peaks(
+    values: npt.NDArray[Any], dwell: float, most: int, allowed: npt.NDArray[np.bool_] | None
+) -> tuple[float, ...]:
+    """Frequencies of the highest peaks that stand clear of their surroundings."""
+    from scipy.signal import find_peaks
+
+    points = values.size
+    window = np.exp(-2 / points * np.arange(points))
+    height = np.abs(scipy.fft.fftshift(scipy.fft.fft(values * window, 2 * points)))
+    # neighbouring points of noise alone differ by 0.67 of its spread half of the time
+    noise = np.median(np.abs(height[2:] - height[:-2])) / 0.67
+    peaks, _ = find_peaks(height, prominence=8 * noise)
+    if allowed is not None:
+        peaks = peaks[scipy.fft.fftshift(np.repeat(allowed, 2))[peaks]]
+    peaks = peaks[np.argsort(height[peaks])[::-1][:most]]
+    return tuple(scipy.fft.fftshift(scipy.fft.fftfreq(2 * points, dwell))[peaks].tolist())
 
 
 def _overlapping(fit: Crowd) -> list[int]:

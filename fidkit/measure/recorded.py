@@ -27,7 +27,7 @@ def measure_block(record: Record, wanted: Wanted) -> list[list[Line]]:
     level = constant_offset(values)
     clean = values - level[:, None]
     allowed = allowed_points(points, dwell, wanted.region)
-    found = numerics.search(clean, dwell, allowed=allowed, narrow=wanted.lines > 1)
+    found = numerics.search(clean, dwell, allowed=allowed)
     if wanted.near is not None:
         found = _nearest(clean, dwell, wanted.near, allowed, found)
     noise = None if wanted.noise is None else _noise_in(record, wanted.noise)

@@ -131,7 +131,12 @@ class Found:
     energy: Real
 
 
-def search(values: Complex, dwell: float, *, allowed: npt.NDArray[np.bool_] | None = None) -> Found:
+def search(
+    values: Complex,
+    dwell: float,
+    *,
+    allowed: npt.NDArray[np.bool_] | None = None,
+) -> Found:
     """Find the strongest line of each record with a bank of matched exponential windows.
 
     Parameters
@@ -142,9 +147,6 @@ def search(values: Complex, dwell: float, *, allowed: npt.NDArray[np.bool_] | No
         Time between points, s.
     allowed : bool array, shape (points,) or (records, points), optional
         Transform points (in the order of `scipy.fft.fft`) among which to look.
-    narrow : bool
-        Look for the highest peak instead, with only the mildest windows: several lines close
-        together would else be found as one broad one.
 
     Returns
     -------
@@ -159,7 +161,7 @@ def search(values: Complex, dwell: float, *, allowed: npt.NDArray[np.bool_] | No
     noise = np.full(records, np.inf)
     # a window off by a factor of two from the line's own decay loses only 6 % in height
     decays = 1.0 * 4.0 ** np.arange(0, max(1, int(np.log(points / 4) / np.log(4)) + 1))
-    for decay in decays[:2] if narrow else decays:
+    for decay in decays:
         window = np.exp(-decay / points * index)
         power = np.abs(scipy.fft.fft(values * window, axis=-1)) ** 2 / (window**2).sum()
         # the median of an exponential distribution is ln 2 of its mean 2 sigma^2
