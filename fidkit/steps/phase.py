@@ -20,9 +20,8 @@ import xarray as xr
 from fidkit import signals
 from fidkit.params import Along, FidkitError, Slider, Unit, step
 
-#: A line stands out where its magnitude passes this many times the noise of one part: noise alone
-#: does so at one point in 270,000.
-STANDS_OUT = 5.0
+#: A line stands out where noise alone reaches its magnitude in one record out of so many.
+RECORDS_PER_FALSE_LINE = 1000
 
 #: Weight of the negative share of the energy against the entropy.
 PENALTY = 10.0
@@ -226,8 +225,10 @@ def _own_phase(
 ) -> tuple[float, float]:
     """Phase (degree, at 0 Hz) and slope (degree/Hz) of one record; NaN without a line."""
     magnitude = np.abs(record)
-    # the median of a noise magnitude (Rayleigh) is sqrt(2 ln 2) of the noise in either part
-    threshold = STANDS_OUT * float(np.median(magnitude)) / math.sqrt(2 * math.log(2))
+    # the median of a noise magnitude (Rayleigh) is sqrt(2 ln 2) of the noise in either part, and
+    # one point passes x times that noise with probability exp(-x^2 / 2)
+    noise = float(np.median(magnitude)) / math.sqrt(2 * math.log(2))
+    threshold = noise * math.sqrt(2 * math.log(RECORDS_PER_FALSE_LINE * axis.size))
     regions = _line_regions(magnitude, threshold)
     if not regions:
         return math.nan, math.nan
