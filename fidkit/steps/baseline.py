@@ -56,8 +56,8 @@ def correct_baseline(
     conditioned. Signal is found by repetition: fit, take the noise from the median magnitude of
     what is left over (for Gaussian noise 1.1774 standard deviations of either part; 0.6745 of a
     real-valued spectrum), leave out the points that pass the threshold and their neighbours, and
-    fit again until the same points are left out. Common practice; the feet of strong lines below
-    the threshold remain in the fit.
+    fit again until the same points are left out. Common practice. The feet of strong lines below
+    the threshold stay in the fit, and those of the dispersive part reach far: phase first.
     """
     axis = np.asarray(spectrum["frequency"].values, dtype=float)
     basis = np.polynomial.legendre.legvander(np.linspace(-1, 1, axis.size), order)
