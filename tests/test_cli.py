@@ -547,7 +547,7 @@ JCAMP = (DEMO / "loop_40mm.dx").read_text
 MALFORMED = {
     "empty file": ("a.csv", "", "empty"),
     "empty JCAMP": ("a.dx", "", "empty"),
-    "only a heading": ("a.csv", TABLE_HEAD, "point"),
+    "only a heading": ("a.csv", TABLE_HEAD, "rows"),
     "two points": ("a.csv", rows(*decay(2)), "point"),
     "text in numbers": ("a.csv", rows(*replaced(decay(), 9, "0.009,loud,0")), "loud"),
     "missing column": ("a.csv", rows(*replaced(decay(), 9, "0.009,1")), "column"),
