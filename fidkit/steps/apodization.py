@@ -15,7 +15,6 @@ from typing import Annotated, Any
 import numpy as np
 import numpy.typing as npt
 import scipy.fft
-import scipy.optimize
 import xarray as xr
 
 from fidkit import signals
@@ -195,18 +194,6 @@ def apodize_trapezoid(
     return _weighted(fid, np.maximum(weight, 0))
 
 
-def _gaussian_exponent(fid: xr.DataArray, broadening: float) -> npt.NDArray[np.float64]:
-    exponent: npt.NDArray[np.float64] = -((np.pi * broadening * fid["time"].values) ** 2) / (
-        4 * math.log(2)
-    )
-    return exponent
-
-
-def _weighted(fid: xr.DataArray, weight: npt.NDArray[Any]) -> xr.DataArray:
-    """The FID times a weight along time; single precision stays single."""
-    return fid.copy(data=fid.values * weight.astype(fid.real.dtype))
-
-
 @step
 def apodize_matched(fid: xr.DataArray) -> xr.DataArray:
     """Weight by the exponential that matches the strongest line's own decay, record by record.
@@ -267,6 +254,8 @@ def apodize_matched(fid: xr.DataArray) -> xr.DataArray:
 
 def _own_broadening(record: npt.NDArray[Any], dwell: float) -> float:
     """Width (Hz) of the strongest line of one record; 0 without decay, NaN without a line."""
+    from scipy.optimize import minimize  # slow to load, and needed nowhere else
+
     points = record.size
     index = np.arange(points)
     length = scipy.fft.next_fast_len(2 * points)
@@ -300,7 +289,7 @@ def _own_broadening(record: npt.NDArray[Any], dwell: float) -> float:
         line = np.sum(sums * weight * np.exp(-2j * np.pi * trial[1] * width * time))
         return -float(np.abs(line) ** 2 / np.sum(weight**2))
 
-    found = scipy.optimize.minimize(
+    found = minimize(
         loss,
         [0.0, 0.0],
         method="Nelder-Mead",
@@ -313,3 +302,15 @@ def _own_broadening(record: npt.NDArray[Any], dwell: float) -> float:
     )
     broadening = float(np.exp(found.x[0]) * width)
     return broadening if broadening > lowest else 0.0
+
+
+def _gaussian_exponent(fid: xr.DataArray, broadening: float) -> npt.NDArray[np.float64]:
+    exponent: npt.NDArray[np.float64] = -((np.pi * broadening * fid["time"].values) ** 2) / (
+        4 * math.log(2)
+    )
+    return exponent
+
+
+def _weighted(fid: xr.DataArray, weight: npt.NDArray[Any]) -> xr.DataArray:
+    """The FID times a weight along time; single precision stays single."""
+    return fid.copy(data=fid.values * weight.astype(fid.real.dtype))
