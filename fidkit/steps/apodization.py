@@ -21,7 +21,7 @@ from fidkit import signals
 from fidkit.params import FidkitError, Range, Slider, Unit, step
 
 Broadening = Annotated[float, Unit("Hz"), Range(0), Slider(0, 50, 0.1)]
-Fraction = Annotated[float, Unit("of the record"), Range(0, 1), Slider(0, 1, 0.01)]
+Fraction = Annotated[float, Unit("fraction"), Range(0, 1), Slider(0, 1, 0.01)]
 
 
 @step
@@ -113,7 +113,7 @@ def apodize_cosine(
     fid: xr.DataArray,
     *,
     power: Annotated[int, Range(1, 8), Slider(1, 4, 1)] = 1,
-    peak: Annotated[float, Unit("of the record"), Range(0, 0.5), Slider(0, 0.5, 0.01)] = 0.0,
+    peak: Annotated[float, Unit("fraction"), Range(0, 0.5), Slider(0, 0.5, 0.01)] = 0.0,
 ) -> xr.DataArray:
     """Weight by part of a cosine that reaches zero at the last measured point.
 

@@ -25,7 +25,9 @@ def correct_baseline(
     *,
     order: Annotated[int, Range(0, 10), Slider(0, 6, 1)] = 1,
     region: Annotated[tuple[float, float] | None, Unit("Hz"), Along("frequency")] = None,
-    threshold: Annotated[float, Unit("times the noise"), Range(2, 100), Slider(2, 10, 0.5)] = 3.0,
+    threshold: Annotated[
+        float, Unit("standard deviations"), Range(2, 100), Slider(2, 10, 0.5)
+    ] = 3.0,
 ) -> xr.DataArray:
     """Take a polynomial off that goes through the points without signal.
 
