@@ -281,19 +281,26 @@ def _assemble(
     }
     reserved = {"history", "notes", "source", "long_name", *signals.SIGNAL_ATTRIBUTES, *shared}
     more = {name: value for name, value in record.more.items() if name not in reserved}
-    if is_fid:
-        signal = signals.from_array(
-            record.values,
-            dwell_time=record.dwell_time,  # type: ignore[arg-type]
-            time_start=record.time_start or 0.0,
-            **shared,
-            **more,
-        )
-    else:
-        frequency = np.asarray(record.frequency, dtype=float)
-        if record.frequency_in_ppm:
-            frequency = frequency * float(record.carrier_frequency) * 1e-6
-        signal = signals.spectrum_from_array(record.values, frequency=frequency, **shared, **more)
+    try:
+        if is_fid:
+            signal = signals.from_array(
+                record.values,
+                dwell_time=record.dwell_time,  # type: ignore[arg-type]
+                time_start=record.time_start or 0.0,
+                **shared,
+                **more,
+            )
+        else:
+            frequency = np.asarray(record.frequency, dtype=float)
+            if record.frequency_in_ppm:
+                frequency = frequency * float(record.carrier_frequency) * 1e-6
+            signal = signals.spectrum_from_array(
+                record.values, frequency=frequency, **shared, **more
+            )
+    except FidkitError:
+        raise
+    except ValueError as error:  # of xarray, where a coordinate does not fit
+        raise FidkitError(f"the coordinates do not fit the values: {error}") from error
     for name in ("history", "notes", *signals.SIGNAL_ATTRIBUTES):
         if name in record.more:
             signal.attrs[name] = record.more[name]

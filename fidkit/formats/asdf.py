@@ -33,6 +33,8 @@ ORDINATE = re.compile(r"[@-Ia-i%J-Rj-rS-Zs]\d*|[+-]?\d+|\S")
 ORDINATE_PLAIN = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d{1,3}(?!\d))?|\S")
 COMPRESSED = re.compile(r"[@-DF-Ia-df-i%J-Zj-s]")
 LONGEST_NUMBER = 40
+#: As words these are no numbers, though their letters might pass for compressed digits.
+NO_NUMBER = re.compile(r"(?<!\S)[+-]?(?:nan|inf\w*)(?![^\s+-])", re.IGNORECASE)
 
 
 @dataclass(frozen=True)
@@ -88,6 +90,8 @@ def decode(lines: Iterable[tuple[int, str]], expected: int | None) -> Table:
             raise FidkitError(
                 f"line {number}: must begin with an X value; got {text.strip()[:40]!r}"
             )
+        if word := NO_NUMBER.search(text):
+            raise FidkitError(f"line {number}: holds {word[0]!r}, which is no number")
         tokens = body.findall(text, start.end())
         check = difference is not None
         line_x.append(start[1])

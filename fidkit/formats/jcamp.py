@@ -103,8 +103,12 @@ class Column:
         text, line = self.stated.get(what, ("", 0))
         return real_number(text, f"line {line}: {what}") if text else None
 
-    def rounding(self, what: str, trimmed: bool = False) -> float:
-        return printed_unit(self.stated[what][0], trimmed=trimmed)
+    def rounding(self, what: str) -> float:
+        """One unit in the last printed place of a position on the axis, or of a factor."""
+        text = self.stated[what][0]
+        if re.fullmatch(r"[+-]?\d+", text):  # printed short: zeros of the fraction were dropped
+            return abs(float(text)) * 1e-6
+        return printed_unit(text)
 
     @property
     def points(self) -> int | None:
@@ -160,6 +164,10 @@ def read(path: Path, *, block: int | None = None) -> Record:
     if len(set(sizes.values())) > 1:
         raise FidkitError(f"the pages differ in length: {sizes}; the file is damaged")
     points = next(iter(sizes.values()))
+    if x.points not in (None, points):
+        raise FidkitError(
+            f"line {x.stated['points'][1]}: X is to have {x.points} points, but the tables hold {points}"
+        )
     first, step = _axis(x, points, notes, "dwell time" if is_fid else "spacing of the axis")
     record = Record(parts["R"], notes=notes)
     _facts(chosen, record)
@@ -440,8 +448,10 @@ def _ordinates(
     # what the header states may have been taken before the values were rounded to the counts or
     # digits of the table; where these are the values themselves (factor 1) there is no such room
     loose = 0.0 if decoded.unit == 1 and abs(scale) == 1 else decoded.unit * abs(scale)
-    # a factor without a fraction is exact, any other is known to half its last printed place
-    factor_unit = column.rounding("factor") / 2 if scale != int(scale) else 0.0
+    # a factor of a few digits is exact, any other is known to half its last printed place
+    factor_unit = 0.0
+    if factor is not None and float(f"{factor:.3g}") != factor:
+        factor_unit = column.rounding("factor") / 2
     ends = {
         "first": 0,
         "last": values.size - 1,
@@ -452,7 +462,7 @@ def _ordinates(
         stated = column.number(what)
         if stated is None or (what == "last" and column.symbol == "Y"):
             continue
-        unit = column.rounding(what, trimmed=True)
+        unit = printed_unit(column.stated[what][0], trimmed=True)
         # half a unit where the value is printed whole; some programs cut digits off instead
         allowed = unit * (0.5 if values[place] == round(values[place]) else 1.0)
         allowed += loose + abs(decoded.ordinates[place]) * factor_unit + 1e-12 * abs(values[place])
@@ -488,7 +498,8 @@ def _check_x(table: asdf.Table, x: Column, points: int, notes: list[str]) -> Non
     counted = printed - printed[0]
     misses = [
         ~(np.abs(printed * scale - axis) <= unit * abs(scale) + np.abs(printed) * loose + rounding),
-        ~(np.abs(printed - axis) <= unit + rounding),
+        # whole numbers beyond the span are no positions that were rounded
+        ~(np.abs(printed - axis) <= unit + rounding) | ((unit >= 1) & (unit > abs(last - first))),
         ~(np.abs(counted - index + index[0]) <= 0.5),
         ~(np.abs(counted + index - index[0]) <= 0.5),
     ]

@@ -90,6 +90,7 @@ def read(path: Path) -> Record:
     """
     lines = [line.rstrip("\r") for line in text_of(path.read_bytes()).split("\n")]
     record = Record(np.empty(0))
+    printed: dict[str, float] = {}  # one unit in the last place of the keys
     header: list[str] | None = None
     delimiter = ","
     rows: list[list[str]] = []
@@ -99,7 +100,7 @@ def read(path: Path) -> Record:
         if not plain:
             continue
         if plain.startswith("#"):
-            _key(plain.lstrip("# \t"), number, record)
+            _key(plain.lstrip("# \t"), number, record, printed)
         elif header is None:
             delimiter = _delimiter(plain)
             header = [part.strip().strip('"') for part in re.split(delimiter, plain)]
@@ -133,8 +134,8 @@ def read(path: Path) -> Record:
     if "signal" in columns:
         record.values = column("signal")
     elif "imag" in columns:
-        record.values = column("real") + 1j * column("imag")
-        record.values.imag = column("imag")  # an infinite or signed zero part survives only so
+        record.values = np.empty(len(rows), dtype=np.complex128)  # so that -0.0 stays what it is
+        record.values.real, record.values.imag = column("real"), column("imag")
     else:
         record.values = column("real")
     if record.more.pop("precision", "") == "single":
@@ -150,13 +151,13 @@ def read(path: Path) -> Record:
     for name in ("time", "frequency"):
         if name in columns:
             place, unit = columns[name]
-            _axis(record, name, column(name), texts[place], UNITS[unit], numbers)
+            _axis(record, name, column(name), texts[place], UNITS[unit], numbers, printed)
     if record.frequency is not None and record.time_start is not None:
         record.more["time_start"], record.time_start = record.time_start, None
     return record
 
 
-def _key(text: str, number: int, record: Record) -> None:
+def _key(text: str, number: int, record: Record, printed: dict[str, float]) -> None:
     key, colon, value = text.partition(":")
     if not colon:
         return
@@ -166,7 +167,8 @@ def _key(text: str, number: int, record: Record) -> None:
         target, unit = (part for part in measured.groups() if part)
         scale = UNITS[unit]
         found = real_number(value, f"line {number}: {name}")
-        setattr(record, target, found * scale if scale != 1 else found)
+        setattr(record, target, found * scale)
+        printed[target] = printed_unit(value) * scale
     elif name in BARE:
         unit = "hz" if name == "carrier_frequency" else "s"
         raise FidkitError(
@@ -227,11 +229,10 @@ def _axis(
     texts: tuple[str, ...],
     scale: float,
     numbers: list[int],
+    printed: dict[str, float],
 ) -> None:
     """Check that an axis is even as far as its digits go, and put it into the record."""
     span = float(axis[-1] - axis[0])
-    stated = record.dwell_time if name == "time" else None
-    step = span / (axis.size - 1) if stated is None else stated / scale
     if not span or (name == "time" and span < 0):
         raise FidkitError(
             f"{name} must ascend evenly; it runs from {texts[0]} to {texts[-1]} in the table"
@@ -240,18 +241,15 @@ def _axis(
     places = np.array([printed_unit(text) for text in texts])
     digits = max(len(re.sub(r"^[+-]?0*\.?0*|[eE].*$|\.", "", text.strip())) for text in texts)
     with np.errstate(divide="ignore"):
-        leading = np.floor(np.log10(np.abs(axis), where=axis != 0, out=np.full(axis.size, -np.inf)))
+        leading = np.floor(np.log10(np.abs(axis)))
     unit = np.maximum(np.nanmin(places), 10.0 ** (leading + 1 - digits))
-    line = axis[0] + step * np.arange(axis.size)
+    end = max(unit[0], unit[-1])
     rounding = 8 * np.finfo(float).eps * float(np.abs(axis[[0, -1]]).max())
-    wrong = np.abs(axis - line) > 1.01 * unit + rounding
+    step = span / (axis.size - 1)
+    line = axis[0] + step * np.arange(axis.size)
+    # half a unit of the row and, by way of the line, half a unit of the ends
+    wrong = np.abs(axis - line) > 0.51 * (unit + end) + rounding
     if wrong.any():
-        row = int(np.argmax(wrong))
-        if stated is not None:
-            raise FidkitError(
-                f"line {numbers[row]}: {name} is {texts[row].strip()}, but dwell_time_s makes it "
-                f"{line[row]:.8g}; correct one of them"
-            )
         steps = np.diff(axis)
         worst = int(np.argmax(np.abs(steps - np.median(steps))))
         raise FidkitError(
@@ -262,20 +260,26 @@ def _axis(
         exact = np.abs(np.diff(axis) - step).max() <= signals.EVEN_SPACING * abs(step)
         record.frequency = (axis if exact else line) * scale
         return
-    known = float(unit[[0, -1]].sum() / 2 / span)
-    if stated is None and known > 1e-6:
-        record.notes.append(
-            f"the dwell time is stated to {known:.1e} of itself only, by the digits printed"
+    start, stated = record.time_start, record.dwell_time
+    known = (0.51 * (unit[0] + unit[-1]) + rounding) / (axis.size - 1)
+    loose = 0.51 * printed.get("dwell_time", 0.0) / scale
+    if stated is not None and abs(stated / scale - step) > known + loose:
+        raise FidkitError(
+            f"the time column steps by {step * scale:.8g} s, but dwell_time_s says {stated:.8g} s; "
+            "correct one of them"
         )
-    record.dwell_time = (exact_spacing(axis) if stated is None else step) * scale
-    if stated is not None:
-        record.dwell_time = stated
-    if record.time_start is None:
+    if stated is None or loose > known:
+        record.dwell_time = exact_spacing(axis) * scale
+        if known > 1e-6 * step:
+            record.notes.append(
+                f"the dwell time is stated to {known / step:.1e} of itself only, by the digits printed"
+            )
+    if start is None:
         record.time_start = float(axis[0]) * scale
-    elif abs(record.time_start - axis[0] * scale) > (1.01 * unit[0] + rounding) * scale:
+    elif abs(start - axis[0] * scale) > 0.51 * unit[0] * scale + printed["time_start"]:
         raise FidkitError(
             f"line {numbers[0]}: time begins at {texts[0].strip()}, but time_start_s says "
-            f"{record.time_start:g} s; correct one of them"
+            f"{start:g} s; correct one of them"
         )
 
 

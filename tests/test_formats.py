@@ -1,0 +1,456 @@
+"""Text tables, .npy, .npz, netCDF, Zarr and the universal dictionary; what is missing or wrong.
+
+No published source: round trips are exact by definition, and what is refused is common practice.
+"""
+
+from __future__ import annotations
+
+import io
+import subprocess
+import sys
+import zipfile
+
+import h5netcdf
+import nmrglue
+import numpy as np
+import pytest
+import xarray as xr
+
+import fidkit as fk
+from fidkit.params import FidkitError
+
+CARRIER = 63.87e6
+
+
+def make_fid(dtype=np.complex128, seed=3) -> xr.DataArray:
+    rng = np.random.default_rng(seed)
+    values = rng.normal(size=(3, 2, 40)) + 1j * rng.normal(size=(3, 2, 40))
+    values = values if np.dtype(dtype).kind == "c" else values.real
+    times = np.array(["2026-01-02T03:04:05.678901234", "2026-01-02"], dtype="datetime64[ns]")
+    fid = fk.from_array(
+        values.astype(dtype),
+        dwell_time=1e-4 / 3,
+        time_start=1.23e-5,
+        carrier_frequency=CARRIER / 3,
+        nucleus="13C",
+        dims=("channel", "acquired"),
+        coords={
+            "channel": xr.Variable("channel", ["left", "ö", "µ µ"], {"long_name": "Spüle"}),
+            "acquired": xr.Variable("acquired", times, {"long_name": "time of day"}),
+            "recovery_delay": xr.Variable("acquired", np.float32([0.1, 2]), {"units": "seconds"}),
+            "turns": xr.Variable("channel", np.int16([1, -2, 3])),
+            "good": xr.Variable("channel", np.array([True, False, True])),
+            "width": xr.Variable("acquired", np.array([5, 7], dtype="timedelta64[us]")),
+            "temperature": xr.Variable((), 21.5, {"units": "degC"}),
+        },
+        units="V",
+        sample="Wässrige Lösung, 1 µL",
+        coil="",
+        averages=16,
+        gain=2.0,
+        text_that_looks_like_a_number="16",
+    )
+    fid.attrs["history"] = "remove_offset(tail=0.1)\nzero_fill(factor=2)"
+    fid.attrs["notes"] = "erste Zeile\nzweite: ü"
+    return fid
+
+
+def assert_same(found: xr.DataArray, wanted: xr.DataArray) -> None:
+    """Bit for bit: values, types, order, coordinates, attributes."""
+    assert found.name == wanted.name
+    assert found.dims == wanted.dims
+    assert found.dtype == wanted.dtype
+    assert found.values.tobytes() == wanted.values.tobytes()
+    assert list(found.attrs.items()) == list(wanted.attrs.items())
+    assert [type(v) for v in found.attrs.values()] == [type(v) for v in wanted.attrs.values()]
+    assert list(found.coords) == list(wanted.coords)
+    for name in wanted.coords:
+        one, other = found[name], wanted[name]
+        assert (one.dims, one.dtype) == (other.dims, other.dtype)
+        assert one.values.tobytes() == other.values.tobytes()
+        assert list(one.attrs.items()) == list(other.attrs.items())
+
+
+@pytest.mark.parametrize("suffix", ["nc", "zarr"])
+@pytest.mark.parametrize("dtype", [np.complex128, np.complex64, np.float64, np.float32])
+def test_archives_keep_everything(tmp_path, suffix, dtype):
+    fid = make_fid(dtype)
+    path = tmp_path / f"bench.{suffix}"
+    for _ in range(2):  # the second time it replaces the first
+        assert fk.write(fid, path) == path
+        assert_same(fk.read(path), fid)
+    assert [entry.name for entry in tmp_path.iterdir()] == [path.name]
+
+
+@pytest.mark.parametrize("suffix", ["nc", "zarr"])
+def test_archives_keep_a_spectrum_and_hard_values(tmp_path, suffix):
+    fid = make_fid().copy()
+    fid.attrs["history"] = ""
+    spectrum = fk.correct_phase(fk.fourier_transform(fk.zero_fill(fid, factor=2)), zero_order=10.0)
+    assert_same(fk.read(fk.write(spectrum, tmp_path / f"s.{suffix}")), spectrum)
+    hard = fid.copy(data=fid.values)
+    hard[0, 0, 0] = complex(-0.0, 5e-324)
+    hard[0, 0, 1] = complex(1.7976931348623157e308, -0.0)
+    assert_same(fk.read(fk.write(hard, tmp_path / f"h.{suffix}")), hard)
+
+
+def test_other_tools_can_open_the_netcdf(tmp_path):
+    """h5netcdf alone, without xarray: real and imaginary parts, axis and units stand there."""
+    fid = make_fid(np.complex64)
+    with h5netcdf.File(fk.write(fid, tmp_path / "bench.nc"), "r") as file:
+        np.testing.assert_array_equal(file["signal_real"][...], fid.values.real)
+        np.testing.assert_array_equal(file["signal_imaginary"][...], fid.values.imag)
+        np.testing.assert_array_equal(file["time"][...], fid.time.values)
+        assert file["signal_real"].attrs["units"] == "V"
+        assert file["time"].attrs["units"] == "s"
+        assert file.attrs["sample"] == fid.attrs["sample"]
+
+
+def test_zarr_stays_lazy_where_asked(tmp_path):
+    fid = make_fid()
+    path = fk.write(fid, tmp_path / "bench.zarr")
+    lazy = fk.read(path, chunks={})
+    assert lazy.chunks is not None
+    assert fk.read(path).chunks is None
+    assert_same(fk.read(fk.write(lazy, tmp_path / "again.zarr")), fid)
+    assert_same(fk.read(fk.write(lazy, tmp_path / "again.nc")), fid)
+    with pytest.raises(FidkitError, match=r"again\.nc: chunks is for Zarr only"):
+        fk.read(tmp_path / "again.nc", chunks={})
+
+
+@pytest.mark.parametrize("suffix", ["npz", "csv", "txt"])
+@pytest.mark.parametrize("dtype", [np.complex128, np.complex64, np.float64, np.float32])
+def test_tables_and_npz_read_back_exactly(tmp_path, suffix, dtype):
+    one = make_fid(dtype)[0, 0].reset_coords(drop=True)
+    hard = one.values.copy()
+    hard[3:6] = [-0.0, 1e-300 if hard.real.dtype == float else 1e-30, 1 / 3]
+    one = one.copy(data=hard)
+    back = fk.read(fk.write(one, tmp_path / f"bench.{suffix}"))
+    assert back.dtype == one.dtype
+    assert back.values.tobytes() == one.values.tobytes()
+    assert back.time.values.tobytes() == one.time.values.tobytes()
+    assert back.attrs.pop("source") == f"bench.{suffix}"
+    wanted = dict(one.attrs)
+    wanted.pop("source")
+    assert back.attrs == wanted
+    if back.dtype == np.complex128:
+        spectrum = fk.fourier_transform(one.assign_attrs(history=""))
+        found = fk.read(fk.write(spectrum, tmp_path / f"spectrum.{suffix}"))
+        assert found.values.tobytes() == spectrum.values.tobytes()
+        assert found.frequency.values.tobytes() == spectrum.frequency.values.tobytes()
+        assert found.attrs == spectrum.attrs | {"source": f"spectrum.{suffix}"}
+
+
+def test_npz_keeps_leading_dimensions(tmp_path):
+    fid = make_fid()
+    back = fk.read(fk.write(fid, tmp_path / "bench.npz"))
+    assert back.dims == fid.dims
+    for name in fid.coords:
+        assert back[name].dtype == fid[name].dtype
+        np.testing.assert_array_equal(back[name].values, fid[name].values)
+        assert back[name].attrs == fid[name].attrs
+
+
+@pytest.mark.parametrize("suffix", ["csv", "dx"])
+def test_one_record_to_a_file(tmp_path, suffix):
+    with pytest.raises(FidkitError, match="one record"):
+        fk.write(make_fid(), tmp_path / f"bench.{suffix}")
+    assert not list(tmp_path.iterdir())
+
+
+def test_what_was_there_stays_when_writing_fails(tmp_path):
+    fid = make_fid()
+    for suffix in ("nc", "zarr"):
+        path = fk.write(fid, tmp_path / f"bench.{suffix}")
+        with pytest.raises(FidkitError, match="attribute bad must be text or a number"):
+            fk.write(fid.assign_attrs(bad=[1, 2]), path)
+        assert_same(fk.read(path), fid)
+    with pytest.raises(FidkitError, match="the suffix must be"):
+        fk.write(fid, tmp_path / "bench.mat")
+    with pytest.raises(FidkitError, match="cannot be written"):
+        fk.write(fid, tmp_path / "nowhere" / "bench.nc")
+
+
+REAL, IMAGINARY = np.array([1.5, -2.0, 3.25, 4.0]), np.array([0.5, 0.25, -1.0, 2.0])
+HEAD = "# carrier_frequency_hz: 63.87e6\n# nucleus: 13C\n# sample: water phantom\n"
+
+
+def table(header: str, *columns: object, mark: str = ",", head: str = HEAD) -> str:
+    rows = zip(*columns, strict=True)
+    return head + header + "\n" + "".join(mark.join(map(str, row)) + "\n" for row in rows)
+
+
+TIME = [0.001, 0.002, 0.003, 0.004]
+
+
+@pytest.fixture
+def read(tmp_path):
+    def read(text, name="bench.csv", **arguments):
+        path = tmp_path / name
+        path.write_bytes(text if isinstance(text, bytes) else text.encode())
+        return fk.read(path, **arguments)
+
+    return read
+
+
+@pytest.mark.parametrize(
+    "text",
+    [
+        table("time_s,real,imag", TIME, REAL, IMAGINARY),
+        table("time_ms;real;imag", [1, 2, 3, 4], REAL, IMAGINARY, mark=";"),
+        table("time_us\treal\timag", [1000, 2000, 3000, 4000], REAL, IMAGINARY, mark="\t"),
+        table("time_s real imag", TIME, REAL, IMAGINARY, mark="   "),
+        table("Time [ms], Real, Imaginary", [1, 2, 3, 4], REAL, IMAGINARY, mark=" , "),
+        table("imag,time_s,real", IMAGINARY, TIME, REAL),
+        table("real,imag", REAL, IMAGINARY, head=HEAD + "# dwell_time_s: 0.001\n# time_start_ms: 1\n"),
+        table("real,imag", REAL, IMAGINARY, head=HEAD + "#dwell_time_us:1000\n#time_start_us:1000\n\n"),
+        table("time_s,real,imag", TIME, REAL, IMAGINARY).replace("\n", "\r\n"),
+        "\ufeff" + table("time_s,real,imag", TIME, REAL, IMAGINARY),
+        table("time_s,real,imag", TIME, REAL, IMAGINARY).replace("_hz: 63.87e6", "_mhz: 63.87"),
+    ],
+)  # fmt: skip
+def test_text_tables(read, text):
+    fid = read(text)
+    np.testing.assert_array_equal(fid.values, REAL + 1j * IMAGINARY)
+    np.testing.assert_allclose(fid.time.values, TIME, rtol=1e-14)  # rounding of a double
+    assert fid.attrs["carrier_frequency"] == pytest.approx(CARRIER, rel=1e-15)
+    assert (fid.attrs["nucleus"], fid.attrs["sample"]) == ("13C", "water phantom")
+    assert fid.attrs["source"] == "bench.csv"
+
+
+def test_other_columns_and_keys(read):
+    text = table("time_s,signal_mV", TIME, REAL, head=HEAD + "# probe temperature: 21.5\n# note\n")
+    fid = read(text, "bench.txt")
+    assert fid.dtype == np.float64
+    assert fid.attrs["units"] == "mV"
+    assert fid.attrs["probe_temperature"] == 21.5
+    spectrum = read(table("frequency_khz,real", [4, 3, 2, 1], REAL))
+    assert spectrum.frequency.values.tolist() == [1000, 2000, 3000, 4000]
+    assert spectrum.values.tolist() == REAL[::-1].tolist()
+    # by content alone
+    assert read(text, "bench.unknown").dims == ("time",)
+
+
+@pytest.mark.parametrize("form", ["%.6f", "%.5g", "%.7e"])
+def test_printed_rounding_of_the_time_column(read, form):
+    """A dwell time that the print cannot hold: the span gives it, and the rounding is no fault."""
+    dwell, points = 1 / 30011.7, 400
+    time = 1e-4 + dwell * np.arange(points)
+    text = table("time_s,signal", [form % t for t in time], np.ones(points))
+    fid = read(text)
+    last = {"%.6f": 5e-7, "%.5g": 5e-7, "%.7e": 5e-10}[form]
+    assert fk.signals.dwell_time(fid) == pytest.approx(dwell, abs=2 * last / points)
+    rows = text.splitlines()
+    with pytest.raises(FidkitError, match=r"line 105 steps by"):
+        read("\n".join(rows[:104] + rows[109:]))
+
+
+def test_arguments_win_and_are_noted(read):
+    fid = read(
+        table("time_s,real,imag", TIME, REAL, IMAGINARY), nucleus="1H", dwell_time=2e-3, coil="loop"
+    )
+    assert fid.attrs["nucleus"] == "1H"
+    assert fk.signals.dwell_time(fid) == pytest.approx(2e-3, rel=1e-14)
+    assert fid.attrs["coil"] == "loop"
+    assert "nucleus '1H' was given; the file says '13C'" in fid.attrs["notes"]
+
+
+def test_arguments_win_over_an_archive(tmp_path):
+    fid = make_fid()
+    path = fk.write(fid, tmp_path / "bench.nc")
+    back = fk.read(path, carrier_frequency=2e6)
+    assert back.attrs["carrier_frequency"] == 2e6
+    assert back.attrs["history"] == fid.attrs["history"]
+    assert back.attrs["notes"].startswith(fid.attrs["notes"])
+    np.testing.assert_array_equal(back.values, fid.values)
+    np.testing.assert_array_equal(back.time.values, fid.time.values)
+    assert list(back.coords) == list(fid.coords)
+
+
+def test_bare_arrays(tmp_path):
+    data = np.arange(12).reshape(3, 4) * (1 + 2j)
+    path = tmp_path / "coil_3.npy"
+    np.save(path, data)
+    with pytest.raises(FidkitError) as caught:
+        fk.read(path)
+    assert str(caught.value) == (
+        "coil_3.npy: carrier_frequency is not in the file; pass carrier_frequency=<Hz>"
+    )
+    with pytest.raises(FidkitError, match=r"coil_3\.npy: dwell_time .* pass dwell_time=<s>"):
+        fk.read(path, carrier_frequency=CARRIER)
+    fid = fk.read(path, carrier_frequency=CARRIER, dwell_time=1e-3, dims="echo_time")
+    assert fid.dims == ("echo_time", "time")
+    np.testing.assert_array_equal(fid.values, data)
+    assert "taken as 1H" in fid.attrs["notes"]
+    assert "taken as 0 s" in fid.attrs["notes"]
+    np.save(path, np.asfortranarray(data))
+    assert fk.read(path, carrier_frequency=CARRIER, dwell_time=1e-3).dims == ("shot", "time")
+
+
+def test_archives_of_plain_arrays(tmp_path):
+    path = tmp_path / "bench.npz"
+    np.savez_compressed(
+        path, signal=REAL + 1j, dwell_time=1e-3, carrier_frequency=CARRIER, nucleus="31P", time_start=2e-5
+    )  # fmt: skip
+    fid = fk.read(path)
+    assert fid.attrs["nucleus"] == "31P"
+    np.testing.assert_allclose(fid.time.values, 2e-5 + 1e-3 * np.arange(4), rtol=1e-15)
+    np.savez(path, data=REAL, frequency=[40.0, 30, 20, 10], carrier_frequency=CARRIER, stray=[1, 2])
+    spectrum = fk.read(path)
+    assert spectrum.frequency.values.tolist() == [10, 20, 30, 40]
+    assert "stray" in spectrum.attrs["notes"]
+
+
+def npy(header: str, content: bytes = b"") -> bytes:
+    text = header.encode()
+    return b"\x93NUMPY\x01\x00" + len(text).to_bytes(2, "little") + text + content
+
+
+def npz(**members: bytes) -> bytes:
+    target = io.BytesIO()
+    with zipfile.ZipFile(target, "w", zipfile.ZIP_DEFLATED) as archive:
+        for name, content in members.items():
+            archive.writestr(name, content)
+    return target.getvalue()
+
+
+def saved(*, objects: bool = False, **arrays: object) -> bytes:
+    target = io.BytesIO()
+    np.savez(target, allow_pickle=objects, **arrays)
+    return target.getvalue()
+
+
+GOOD = table("time_s,real,imag", TIME, REAL, IMAGINARY)
+FACTS = {"carrier_frequency": CARRIER, "dwell_time": 1e-3}
+HUGE = "{'descr': '<c16', 'fortran_order': False, 'shape': (1000000000000,)}"
+
+MALFORMED = {
+    "empty.csv": (b"", "the file is empty"),
+    "blank.dx": (b" \n\n", "the file is empty"),
+    "junk.bin": (bytes(range(256)) * 40, "is of no format that fidkit knows; fidkit reads JCAMP-DX"),
+    "junk.dx": (b"\0\1\2" * 99, "is of no format that fidkit knows"),
+    "prose.md": ("so it was\n", "is of no format that fidkit knows"),
+    "prose.csv": ("so it was\n", "line 1: must name the columns, such as time_s,real,imag"),
+    "comments.csv": ("# nucleus: 1H\n", "holds no table"),
+    "no_rows.csv": (HEAD + "time_s,real,imag\n", "at least 2 rows; got 0"),
+    "one_row.csv": (HEAD + "time_s,real,imag\n0,1,2\n", "at least 2 rows; got 1"),
+    "word.csv": (GOOD.replace("3.25", "three"), "line 7: real must be a number; got 'three'"),
+    "nan.csv": (GOOD.replace("3.25", "nan"), "line 7: real must be a finite number; got 'nan'"),
+    "short.csv": (GOOD.replace(",-1.0", ""), "line 7: has 2 columns where"),
+    "cut.csv": (GOOD[:-8], "line 8: has 2 columns"),
+    "comma.csv": (GOOD.replace(",", ";").replace("3.25", "3,25"), "got '3,25'; write a decimal point"),
+    "commas.csv": (GOOD.replace("3.25", "3,25"), "line 7: has 4 columns"),
+    "uneven.csv": (GOOD.replace("0.003", "0.0034"), "time must be evenly spaced; line 7"),
+    "still.csv": (table("time_s,signal", [1, 1], [2, 3]), "time must ascend"),
+    "backwards.csv": (table("time_s,signal", [2, 1], [2, 3]), "time must ascend"),
+    "no_time.csv": (table("real,imag", REAL, IMAGINARY), "dwell_time is not in the file; pass dwell_time=<s>"),
+    "no_carrier.csv": (GOOD.replace("carrier_frequency_hz: 63.87e6", "x: 1"), "carrier_frequency is not in the file"),
+    "no_unit.csv": (GOOD.replace("frequency_hz", "frequency"), "line 1: carrier_frequency must carry its unit"),
+    "bad_key.csv": (GOOD.replace("63.87e6", "fast"), "line 1: carrier_frequency_hz must be a number; got 'fast'"),
+    "zero_carrier.csv": (GOOD.replace("63.87e6", "0"), "carrier_frequency must be a positive number of Hz"),
+    "nucleus.csv": (GOOD.replace("13C", "99Zz"), "nucleus must be one of 1H"),
+    "twice.csv": (table("time_s,real,real", TIME, REAL, REAL), "names real twice"),
+    "lonely.csv": (table("time_s,imag", TIME, REAL), "must name real (and imag), or signal"),
+    "disagrees.csv": ("# dwell_time_s: 0.002\n" + GOOD, "but dwell_time_s says 0.002 s"),
+    "starts.csv": ("# time_start_s: 0.5\n" + GOOD, "but time_start_s says"),
+    "two_points.npz": (saved(data=REAL[:1], **FACTS), "at least 2 points"),
+    "nan.npz": (saved(data=REAL * np.nan, **FACTS), "data must be finite; 4 of 4 values are not"),
+    "text.npz": (saved(data=["a", "b"], **FACTS), "data must be an array of numbers"),
+    "none.npz": (saved(other=REAL), "must hold one array called data or signal; got other"),
+    "dwell.npz": (saved(data=REAL, dwell_time=[1, 2], carrier_frequency=1e6), "dwell_time must be one number"),
+    "negative.npz": (saved(data=REAL, dwell_time=-1.0, carrier_frequency=1e6), "dwell_time must be a positive number"),
+    "objects.npz": (saved(objects=True, data=np.array([{}], dtype=object)), "data holds Python objects"),
+    "attributes.npz": (saved(data=REAL, attributes="[", **FACTS), "attributes must be JSON"),
+    "dims.npz": (saved(data=REAL, dims=np.array(["a", "b"]), **FACTS), "dims must name"),
+    "coordinate.npz": (saved(data=REAL[None], coordinate_shot=REAL, **FACTS), "coordinate"),
+    "cut.npz": (saved(data=REAL, **FACTS)[:-30], "the archive is damaged"),
+    "bomb.npz": (npz(**{"data.npy": bytes(300_000_000)}), "which no measured record does"),
+    "huge.npz": (npz(**{"data.npy": npy(HUGE)}), "must hold 16000000000000 bytes"),
+    "huge.npy": (npy(HUGE), "must hold 16000000000000 bytes"),
+    "cut.npy": (npy("{'descr': '<f8', 'fortran_order': False, 'shape': (2,)}", bytes(12)), "must hold 16 bytes"),
+    "header.npy": (npy("__import__('os')"), "is no readable array"),
+    "objects.npy": (npy("{'descr': '|O', 'fortran_order': False, 'shape': (1,)}", b"cos\nsystem\n"), "holds Python objects"),
+    "stub.npy": (b"\x93NUMPY", "is no readable array"),
+    "cut.nc": (b"\x89HDF\r\n\x1a\n" + bytes(100), "this netCDF cannot be read"),
+    "old.nc": (b"CDF\x01" + bytes(100), "fidkit reads netCDF-4"),
+    "none.dx": ("just text\n", "begins with ##TITLE="),
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("name", MALFORMED)
+def test_malformed_input_is_one_line_with_the_reason(read, name):
+    content, says = MALFORMED[name]
+    with pytest.raises(FidkitError) as caught:
+        read(content, name)
+    message = str(caught.value)
+    assert message.startswith(f"{name}: ")
+    assert says in message
+    assert "\n" not in message
+    assert len(message) < 400
+
+
+def test_files_that_cannot_be_opened(tmp_path):
+    with pytest.raises(FidkitError, match=r"gone\.dx: cannot be read: No such file"):
+        fk.read(tmp_path / "gone.dx")
+    (tmp_path / "folder.zarr").mkdir()
+    with pytest.raises(FidkitError, match=r"folder\.zarr: is a folder, and no Zarr store"):
+        fk.read(tmp_path / "folder.zarr")
+
+
+def test_archives_of_other_makers_and_damaged_ones(tmp_path):
+    path = tmp_path / "other.nc"
+    xr.Dataset({"signal": ("time", REAL)}).to_netcdf(path, engine="h5netcdf")
+    with pytest.raises(FidkitError, match=r"other\.nc: holds no fidkit_layout; fidkit reads the"):
+        fk.read(path)
+    path = fk.write(make_fid(), tmp_path / "bench.nc")
+    raw = path.read_bytes()
+    for part in (0.1, 0.5, 0.9):
+        path.write_bytes(raw[: int(len(raw) * part)])
+        with pytest.raises(FidkitError, match=r"^bench\.nc: "):
+            fk.read(path)
+    path = fk.write(make_fid(), tmp_path / "bench.zarr")
+    (path / "signal" / "zarr.json").write_text("{")
+    with pytest.raises(FidkitError, match=r"^bench\.zarr: "):
+        fk.read(path)
+
+
+def universal(**changes: object) -> dict:
+    found = nmrglue.fileio.fileiobase.create_blank_udic(1)
+    found[0] |= {"size": 4, **changes}
+    return found
+
+
+def test_universal_dictionary():
+    """Placeholders of nmrglue's blank dictionary count as missing."""
+    data = REAL + 1j * IMAGINARY
+    with pytest.raises(FidkitError, match=r"^universal dictionary: carrier_frequency is not in"):
+        fk.from_universal(universal(sw=1000.0), data)
+    with pytest.raises(FidkitError, match=r"^universal dictionary: dwell_time is not in"):
+        fk.from_universal(universal(obs=63.87), data)
+    fid = fk.from_universal(universal(sw=2000.0, obs=63.87, label="13C"), data)
+    np.testing.assert_array_equal(fid.values, data)
+    assert fid.time.values.tolist() == [0, 0.0005, 0.001, 0.0015]
+    assert (fid.attrs["carrier_frequency"], fid.attrs["nucleus"]) == (CARRIER, "13C")
+    fid = fk.from_universal(universal(), [REAL, IMAGINARY], carrier_frequency=1e6, dwell_time=1e-3)
+    np.testing.assert_array_equal(fid.values, data)
+    with pytest.raises(
+        FidkitError, match="size of dimension 0 must be that of the array, 4; got 5"
+    ):
+        fk.from_universal(universal(size=5), data)
+    with pytest.raises(FidkitError, match="ndim must be"):
+        fk.from_universal({"ndim": 2}, data)
+
+
+def test_universal_spectrum_has_the_axis_of_nmrglue():
+    """Against nmrglue's own unit conversion, with its carrier at 0."""
+    found = universal(sw=1000.0, obs=63.87, car=0.0, time=False, freq=True)
+    spectrum = fk.from_universal(found, REAL)
+    wanted = nmrglue.fileio.fileiobase.uc_from_udic(found).hz_scale()
+    np.testing.assert_allclose(spectrum.frequency.values, wanted[::-1], rtol=0, atol=1e-12)
+    np.testing.assert_array_equal(spectrum.values, REAL[::-1])
+
+
+def test_import_loads_no_format_library():
+    code = "import fidkit, sys; fidkit.read; print(sorted({'nmrglue', 'zarr', 'h5netcdf', 'h5py', 'dask', 'bokeh'} & set(sys.modules)))"
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    assert done.stdout.strip() == "[]"
