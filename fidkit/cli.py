@@ -453,10 +453,9 @@ def _grid(results: Sequence[Result], width: int) -> list[str]:
     side_by_side = len(label[0]) + 2 + len(numbers[0])
     if side_by_side + 2 + min(LEAST_STATUS, max(map(len, ["status", *status]))) <= width:
         room = width - side_by_side - 2
-        heading = ("", "status", "")
         lines = [
             f"{left}  {middle}  {words}"
-            for left, middle, words in zip(label, numbers, heading, strict=False)
+            for left, middle, words in zip(label, numbers, ("", "status", ""), strict=False)
         ]
         for left, middle, words in zip(label[3:], numbers[3:], status, strict=True):
             first, *more = textwrap.wrap(words, room) or [""]
