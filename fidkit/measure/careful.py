@@ -130,6 +130,8 @@ def with_care(
                 width = abs(fit.rate[0]) + resolution
                 trials.append(replace(model, gaussian=(width / 2) ** 2))
                 trials.append(replace(model, gaussian=width**2, only_gaussian=True))
+            if not trials:
+                break
             fits = [(_fit(record, spectrum, trial, band), trial) for trial in trials]
             (best, _), trial = min(fits, key=lambda item: item[0][0].criterion)
             if best.criterion > fit.criterion - ADDITION_COST:
@@ -169,7 +171,7 @@ def with_care(
             (model, fit, band), values = kept, whole
     tone = original - values
     lines = [_from_crowd(fit, place, record, band, model, noise) for place in range(model.named)]
-    members = [0] if wanted.lines > 1 else _overlapping(fit)
+    members = [0] if wanted.lines > 1 else _overlapping(fit, resolution)
     if len(members) > 1:
         _make_composite(lines[0], fit, members)
     lines.sort(key=lambda line: line.frequency)
@@ -201,13 +203,14 @@ def _peaks(
     return tuple(scipy.fft.fftshift(scipy.fft.fftfreq(2 * points, dwell))[peaks].tolist())
 
 
-def _overlapping(fit: Crowd) -> list[int]:
-    """The first line and all that overlap it, directly or through each other."""
+def _overlapping(fit: Crowd, resolution: float) -> list[int]:
+    """The first line and all that overlap it, directly or through each other; no steady tones."""
     width = fit.rate / np.pi + 0.53 * np.sqrt(fit.gaussian) * (np.arange(fit.rate.size) == 0)
+    decays = np.array([_decays(fit, resolution, place) for place in range(fit.rate.size)])
     members = [0]
     for member in members:
         apart = np.abs(fit.frequency - fit.frequency[member])
-        joined = (apart < width + width[member]) & (fit.rate > 0)
+        joined = (apart < width + width[member]) & decays
         members += [int(other) for other in np.flatnonzero(joined) if other not in members]
     return sorted(members)
 
@@ -231,10 +234,11 @@ def _make_composite(line: Line, fit: Crowd, members: list[int]) -> None:
     )
 
 
-def _decays(fit: Crowd, resolution: float) -> bool:
-    """Whether the first line surely decays: a steady tone does so by no more than its noise."""
-    surely = fit.rate[0] > max(3 * np.sqrt(fit.covariance[1, 1]), 0.05 * resolution)
-    return bool(surely or fit.gaussian > resolution**2)
+def _decays(fit: Crowd, resolution: float, place: int = 0) -> bool:
+    """Whether a line surely decays: a steady tone does so by no more than its noise."""
+    variance = fit.covariance[2 * place + 1, 2 * place + 1]
+    surely = fit.rate[place] > max(3 * np.sqrt(variance), 0.05 * resolution)
+    return bool(surely or (place == 0 and fit.gaussian > resolution**2))
 
 
 def _fit(

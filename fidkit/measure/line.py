@@ -238,8 +238,10 @@ def _dataset(
         for place, text in enumerate(status):
             if not np.isfinite(value[place]):
                 std[place] = np.nan
-                if text == "ok":
-                    status[place] = "missing: not to be had from this record"
+                reason = "not to be had from this record" if text == "ok" else text
+                status[place] = (
+                    f"missing: {reason.removeprefix('missing: ').removeprefix('doubtful: ')}"
+                )
             elif not np.isfinite(std[place]) and text == "ok":
                 status[place] = "doubtful: uncertainty not known"
         variables[name] = (

@@ -87,7 +87,7 @@ def _nearest(
     strongest: numerics.Found,
 ) -> numerics.Found:
     """Start values of the line nearest to a frequency, record by record."""
-    from scipy.signal import find_peaks
+    from scipy.signal import find_peaks, peak_widths
 
     points = values.shape[1]
     axis = scipy.fft.fftshift(scipy.fft.fftfreq(points, dwell))
@@ -95,7 +95,8 @@ def _nearest(
         np.array(part) for part in (strongest.frequency, strongest.rate, strongest.energy)
     )
     for row, one in enumerate(values):
-        window = np.exp(-max(strongest.rate[row], 1 / (points * dwell)) * dwell * np.arange(points))
+        widened = max(strongest.rate[row], 1 / (points * dwell))
+        window = np.exp(-widened * dwell * np.arange(points))
         height = np.abs(scipy.fft.fftshift(scipy.fft.fft(one * window)))
         noise = np.median(np.abs(np.diff(height))) / 0.67
         peaks, _ = find_peaks(height, prominence=8 * noise)
@@ -105,10 +106,12 @@ def _nearest(
             energy[row] = 0.0
             continue
         place = peaks[np.argmin(np.abs(axis[peaks] - near))]
-        around = np.abs(np.arange(points) - place) <= 2
-        one_found = numerics.search(one[None], dwell, allowed=scipy.fft.ifftshift(around))
-        frequency[row], rate[row] = one_found.frequency[0], one_found.rate[0]
-        energy[row] = one_found.energy[0]
+        # the magnitude of a line is sqrt(3) wider than its absorption; the window widens it too
+        width = peak_widths(height, [place])[0][0] / (points * dwell) / np.sqrt(3)
+        frequency[row] = axis[place]
+        rate[row] = max(np.pi * width - widened, 1 / (points * dwell))
+        around = scipy.fft.ifftshift(np.arange(points) == place)
+        energy[row] = numerics.search(one[None], dwell, allowed=around).energy[0]
     return numerics.Found(frequency, rate, energy)
 
 

@@ -428,7 +428,11 @@ def fit_crowd(
     full = np.zeros(free.size)
     full[0 : 2 * lines : 2], full[1 : 2 * lines : 2] = frequency, rate
     scale = np.repeat(np.abs(full[1 : 2 * lines : 2]) + resolution, 2)
-    low = np.full(free.size, -np.inf)
+    low, high = np.full(free.size, -np.inf), np.full(free.size, np.inf)
+    # a line stays in reach of its start, lest it run over to a stronger neighbour
+    reach = 2 * scale[: 2 * lines : 2] / np.pi + resolution
+    low[0 : 2 * lines : 2] = frequency - reach
+    high[0 : 2 * lines : 2] = frequency + reach
     # a line may come out as slightly growing where it hardly decays; not more
     low[1 : 2 * lines : 2] = -2 * resolution
     if gaussian is not None:
@@ -436,7 +440,7 @@ def fit_crowd(
         scale = np.append(scale, gaussian)
         low[[1, -1]] = 0.0
     full[~free] = 0.0
-    scale, low = scale[free], low[free]
+    scale, low, high = scale[free], low[free], high[free]
 
     @functools.lru_cache(maxsize=2)  # the optimiser asks for value and slope at the same place
     def solve(place: bytes) -> tuple[Real, Real, Real, Real, Real]:
@@ -466,9 +470,9 @@ def fit_crowd(
 
     outcome = least_squares(
         miss,
-        np.maximum(full[free], low + 1e-9 * scale),
+        np.clip(full[free], low + 1e-9 * scale, high),
         jac=slope,
-        bounds=(low, np.inf),
+        bounds=(low, high),
         x_scale=scale,
         xtol=1e-10,
         ftol=1e-14,
