@@ -27,10 +27,10 @@ MOST_POINTS = 2**24
 
 # E and e are squeezed digits too, so an exponent must carry its sign wherever the form may be
 # squeezed; a table of plain numbers may leave it out.
-X = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]\d{1,3}(?!\d))?)")
-X_PLAIN = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d{1,3}(?!\d))?)")
-ORDINATE = re.compile(r"[@-Ia-i%J-Rj-rS-Zs]\d*|[+-]?\d+|\S")
-ORDINATE_PLAIN = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d{1,3}(?!\d))?|\S")
+X = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]\d{1,3}(?!\d))?)", re.ASCII)
+X_PLAIN = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d{1,3}(?!\d))?)", re.ASCII)
+ORDINATE = re.compile(r"[@-Ia-i%J-Rj-rS-Zs]\d*|[+-]?\d+|\S", re.ASCII)
+ORDINATE_PLAIN = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d{1,3}(?!\d))?|\S", re.ASCII)
 COMPRESSED = re.compile(r"[@-DF-Ia-df-i%J-Zj-s]")
 LONGEST_NUMBER = 40
 #: As words these are no numbers, though their letters might pass for compressed digits.
@@ -74,10 +74,14 @@ def decode(lines: Iterable[tuple[int, str]], expected: int | None) -> Table:
         named.
     """
     rows = [(number, text) for number, text in lines if text and not text.isspace()]
-    whole = any(COMPRESSED.search(text) for _, text in rows) or any(
-        len(re.findall(r"[eE]", text)) > len(re.findall(r"[\d.][eE][+-]?\d", text))
-        for _, text in rows
+    joined = "\n".join(text for _, text in rows)
+    whole = COMPRESSED.search(joined) is not None or (
+        len(re.findall(r"[eE]", joined)) > len(re.findall(r"[\d.][eE][+-]?\d", joined))
     )
+    # numbers that stand apart need no expression to find them
+    apart = not whole and re.fullmatch(r"[\d\s.+-]*", joined, re.ASCII) is not None
+    apart = apart and re.search(r"\S[+-]", joined) is None
+    suspect = NO_NUMBER.search(joined) is not None
     head, body = (X, ORDINATE) if whole else (X_PLAIN, ORDINATE_PLAIN)
     limit = MOST_POINTS if expected is None else min(expected, MOST_POINTS)
     values: list[float] = []
@@ -85,20 +89,34 @@ def decode(lines: Iterable[tuple[int, str]], expected: int | None) -> Table:
     last: float = 0
     difference: int | None = None  # the last difference, where the last ordinate came from one
     for number, text in rows:
-        start = head.match(text)
-        if start is None:
-            raise FidkitError(
-                f"line {number}: must begin with an X value; got {text.strip()[:40]!r}"
-            )
-        if word := NO_NUMBER.search(text):
-            raise FidkitError(f"line {number}: holds {word[0]!r}, which is no number")
-        tokens = body.findall(text, start.end())
-        check = difference is not None
-        line_x.append(start[1])
-        line_index.append(len(values) - check)
-        fresh = True
-        if not tokens:
+        if apart:
+            parts = text.split()
+        else:
+            if suspect and (word := NO_NUMBER.search(text)):
+                raise FidkitError(f"line {number}: holds {word[0]!r}, which is no number")
+            start = head.match(text)
+            if start is None:
+                raise FidkitError(
+                    f"line {number}: must begin with an X value; got {text.strip()[:40]!r}"
+                )
+            parts = [start[1], *body.findall(text, start.end())]
+        if len(parts) < 2:
             raise FidkitError(f"line {number}: holds an X value but no ordinate")
+        check = difference is not None
+        line_x.append(parts[0])
+        line_index.append(len(values) - check)
+        if not whole:
+            try:
+                _, *numbers = map(float, parts)
+            except ValueError:
+                junk = next((part for part in parts if not _is_number(part)), parts[0])
+                raise _no_number(number, text, junk) from None
+            values += numbers
+            if len(values) > limit:
+                raise _too_many(number, expected)
+            continue
+        tokens = parts[1:]
+        fresh = True
         for token in tokens:
             mark = token[0]
             if len(token) > LONGEST_NUMBER:
@@ -126,16 +144,9 @@ def decode(lines: Iterable[tuple[int, str]], expected: int | None) -> Table:
                     values += [last] * more
             else:
                 try:
-                    if not whole:
-                        value: float = float(token)
-                    elif mark in SQUEEZED:
-                        value = int(SQUEEZED[mark] + token[1:])
-                    else:
-                        value = int(token)
+                    value = int(SQUEEZED[mark] + token[1:] if mark in SQUEEZED else token)
                 except ValueError:
-                    raise FidkitError(
-                        f"line {number}: {_around(text, token)!r} holds {token!r}, which is no number"
-                    ) from None
+                    raise _no_number(number, text, token) from None
                 if check and fresh:
                     if value != last:
                         raise FidkitError(
@@ -159,10 +170,10 @@ def decode(lines: Iterable[tuple[int, str]], expected: int | None) -> Table:
         worst = int(np.argmin(np.isfinite(ordinates)))
         raise FidkitError(f"ordinate {worst} of the table is too large for a number")
     unit = 1.0
-    if not whole:
-        fractions = [len(part) for _, text in rows for part in re.findall(r"\.(\d+)", text)]
-        # an X with a fraction makes the unit too small by chance only where all ordinates are whole
-        unit = 10.0 ** -max(fractions, default=0) if (ordinates % 1).any() else 1.0
+    if (
+        ordinates % 1
+    ).any():  # then what the longest fraction says; an X can only have made it longer
+        unit = 10.0 ** -max(map(len, re.findall(r"\.(\d+)", joined)), default=0)
     return Table(ordinates, [number for number, _ in rows], line_x, line_index, unit)
 
 
@@ -176,9 +187,18 @@ def _too_many(number: int, expected: int | None) -> FidkitError:
     )
 
 
-def _around(text: str, token: str) -> str:
+def _is_number(text: str) -> bool:
+    try:
+        float(text)
+    except ValueError:
+        return False
+    return True
+
+
+def _no_number(number: int, text: str, token: str) -> FidkitError:
     place = text.find(token)
-    return text[max(place - 10, 0) : place + 10].strip()
+    around = text[max(place - 10, 0) : place + 10].strip()
+    return FidkitError(f"line {number}: {around!r} holds {token!r}, which is no number")
 
 
 def encode(

@@ -47,6 +47,8 @@ def printed_unit(text: str, *, trimmed: bool = False) -> float:
 
     With `trimmed`, zeros at the end of the fraction do not count: ``-422.0000`` gives 1.
     """
+    if not trimmed and "e" not in text and "E" not in text:
+        return 10.0 ** -len(text.strip().partition(".")[2])
     try:
         number = Decimal(text.strip())
     except InvalidOperation:
@@ -63,7 +65,7 @@ def printed_unit(text: str, *, trimmed: bool = False) -> float:
 def real_number(text: str, what: str) -> float:
     """A finite number from text, or `FidkitError`."""
     try:
-        value = float(text.strip())
+        value = float(text.strip().replace("_", "?"))  # Python's 1_000 is no number in a file
     except ValueError:
         hint = "; write a decimal point, not a comma" if "," in text else ""
         raise FidkitError(f"{what} must be a number; got {text.strip()[:40]!r}{hint}") from None
