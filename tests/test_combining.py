@@ -210,6 +210,25 @@ def test_drift_that_smears_the_line_is_taken_out() -> None:
     assert plain < 0.5
 
 
+def test_second_round_takes_back_what_a_noisy_first_shot_costs() -> None:
+    """Aligned to one noisy shot the mean loses some 2 % of its height, aligned to the mean 1 %.
+
+    Both means hold nearly the same noise, so that their heights can be compared closely.
+    """
+    rng = np.random.default_rng(3)
+    drift = rng.uniform(-30, 30, 48)
+    values = np.stack([decay(500 + f, phase=f / 10) for f in drift - drift[0]])
+    values = values + noise(rng, values.shape, 0.3)
+    once = combining._aligned(values, values[0], TIME, True, True).mean(axis=0)
+    both = fk.average_shots(make(values, "shot"), align_frequency=True, align_phase=True).values
+    height = []
+    for mean in (once, both):
+        offset = combining._difference((mean * decay().conj())[None], TIME)[0]
+        overlap = np.vdot(decay(), mean * np.exp(-2j * np.pi * offset * TIME))
+        height.append(abs(overlap) / np.vdot(decay(), decay()).real)
+    assert height[1] > height[0] + 0.005
+
+
 def test_leading_dimensions_are_aligned_one_by_one() -> None:
     rng = np.random.default_rng(8)
     drift = rng.uniform(-20, 20, (3, 4))

@@ -69,10 +69,8 @@ def remove_offset(fid: xr.DataArray, *, tail: Tail = 0.1) -> xr.DataArray:
     measured = signals.acquired_points(fid)
     values = fid.values.copy()
     end = values[..., measured - _tail_points(tail, measured, "remove_offset") : measured]
-    # the sum in double precision: a small mean under a large spread
-    wide = np.complex128 if np.iscomplexobj(values) else np.float64
-    offset = end.mean(axis=-1, keepdims=True, dtype=wide)
-    values[..., :measured] -= offset.astype(values.dtype)
+    offset = end.mean(axis=-1, keepdims=True)
+    values[..., :measured] -= offset
     return fid.copy(data=values)
 
 
