@@ -143,7 +143,7 @@ def _parser() -> argparse.ArgumentParser:
         help="measure the line in each record",
         description="Measure the strongest line of each record, or the one asked for.",
         epilog=f"{FOLDER_RULE} Numbers read 137.41(2): the bracket is one standard uncertainty of "
-        "the last digits. CSV and JSON hold all digits, and also phase, field and ppm. Exit status 1 if a record could not be measured.",
+        "the last digits, (?) an uncertainty and - a value that is not known. CSV and JSON hold all digits, and also phase, field and ppm. Exit status 1 if a record could not be measured.",
     )
     measure.add_argument("paths", nargs="+", metavar="PATH", help="record, or folder of records")
     measure.add_argument("--chain", metavar="FILE", help="saved chain of steps to take first")
@@ -224,7 +224,8 @@ def _measure(options: argparse.Namespace) -> int:
         )
     if not results and not stopped:
         raise fidkit.FidkitError(
-            f"{', '.join(options.paths)}: no record in it; {FOLDER_RULE} Name a file to read it"
+            f"{', '.join(options.paths)}: nothing in it could be a record (`fidkit measure --help` "
+            "says what is passed over); name a file to read it all the same"
         )
     if form == "json":
         text = _json(results)
@@ -513,7 +514,8 @@ def _put(text: str, out: str | None) -> bool:
         write_whole(out, text.encode())
     except OSError as error:
         print(
-            f"fidkit: {out} was not written, the result is printed instead: {_reason(error)}",
+            f"fidkit: {out} was not written: {(error.strerror or str(error)).lower()}; "
+            "the result is printed instead",
             file=sys.stderr,
         )
         sys.stdout.write(text)

@@ -332,7 +332,7 @@ def test_out(run, folder, tmp_path):
     status, out, err = run("measure", folder / "b_first.csv", "--out", target)
     assert status == 1
     assert json.loads(out)["results"]  # nothing is lost
-    assert "was not written, the result is printed instead" in err
+    assert "was not written: no such file or directory; the result is printed instead" in err
 
 
 def test_missing_facts_can_be_given(run, tmp_path):
@@ -369,7 +369,7 @@ def test_a_store_is_a_record(run, tmp_path):
 def test_empty_folder(run, tmp_path):
     status, _, err = run("measure", tmp_path)
     assert status == 1
-    assert "no record in it" in err
+    assert "nothing in it could be a record" in err
 
 
 def test_bar_only_on_a_terminal(monkeypatch):
