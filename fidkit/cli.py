@@ -143,7 +143,8 @@ def _parser() -> argparse.ArgumentParser:
         help="measure the line in each record",
         description="Measure the strongest line of each record, or the one asked for.",
         epilog=f"{FOLDER_RULE} Numbers read 137.41(2): the bracket is one standard uncertainty of "
-        "the last digits, (?) an uncertainty and - a value that is not known. CSV and JSON hold all digits, and also phase, field and ppm. Exit status 1 if a record could not be measured.",
+        "the last digits, (?) an uncertainty and - a value that is not known. CSV and JSON hold all "
+        "digits, and also phase, field and ppm. Exit status 1 if a record could not be measured.",
     )
     measure.add_argument("paths", nargs="+", metavar="PATH", help="record, or folder of records")
     measure.add_argument("--chain", metavar="FILE", help="saved chain of steps to take first")
