@@ -221,3 +221,13 @@ def scale_signal(fid: xr.DataArray, *, ratio: _Annotated[float, _Unit("V/V"), _R
     assert "scale_signal (fid to fid): Multiply the record by a number." in run.stdout
     assert "ratio = 2.0: a number in [0, 9] V/V" in run.stdout
     assert "By how much, V/V." in run.stdout
+
+
+def test_readme_has_two_commands():
+    """One measures the demo, one passes the tests; each sets everything up by itself."""
+    readme = (PACKAGE.parent / "README.md").read_text()
+    commands = re.findall(r"^```sh\n(.*)\n```$", readme, re.M)
+    assert len(commands) == 2
+    assert all(command.startswith("python3 -m venv .venv && ") for command in commands)
+    assert commands[0].endswith(".venv/bin/fidkit measure data_demo")
+    assert ".venv/bin/pytest" in commands[1]
