@@ -7,12 +7,15 @@ values are read as literals and checked, and the text is made anew and must mean
 from __future__ import annotations
 
 import ast
+import itertools
 import os
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Hashable, Iterable, Iterator, Mapping
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import xarray as xr
 
 from fidkit.files import write_whole
@@ -24,6 +27,10 @@ __all__ = ["Call", "Chain", "chain_of"]
 LARGEST_TEXT = 64_000
 DEEPEST_NESTING = 20
 MOST_STEPS = 200
+
+#: Points handled at once when a chain runs over many records: few enough that what one step leaves
+#: is still in the cache for the next, enough that the bookkeeping of a step does not count.
+BLOCK_POINTS = 2**19
 
 
 @dataclass(frozen=True)
@@ -122,12 +129,90 @@ class Chain:
         FidkitError
             What a step raises, with its number in the chain.
         """
-        for number, call in enumerate(self.calls, 1):
+        for first, last in self._stretches():
+            if signal.chunks is not None and not self.calls[first].spec.together:
+                signal = self._lazily(signal, first, last)
+            else:
+                signal = self._in_blocks(signal, first, last)
+        return signal
+
+    def _stretches(self) -> Iterator[tuple[int, int]]:
+        """Runs of steps that treat every record alone; each step that does not, by itself."""
+        first = 0
+        for together, calls in itertools.groupby(self.calls, lambda call: call.spec.together):
+            length = len(tuple(calls))
+            for size in [1] * length if together else [length]:
+                yield first, first + size
+                first += size
+
+    def _run(self, signal: xr.DataArray, first: int, last: int) -> xr.DataArray:
+        for number, call in enumerate(self.calls[first:last], first + 1):
             try:
                 signal = call.spec.function(signal, **call.arguments)
             except FidkitError as error:
                 raise type(error)(f"step {number} of the chain: {error}") from error
         return signal
+
+    def _in_blocks(self, signal: xr.DataArray, first: int, last: int) -> xr.DataArray:
+        """Take a stretch of steps; many records go in blocks that fit the cache, on threads."""
+        together = self.calls[first].spec.together
+        leading = {name: signal.sizes[name] for name in signal.dims[:-1]}
+        dimension = max(leading, key=lambda name: leading[name], default=None)
+        if together or dimension is None or signal.size < 2 * BLOCK_POINTS:
+            return self._run(signal, first, last)
+        rows = max(1, BLOCK_POINTS * leading[dimension] // signal.size)
+        starts = range(0, leading[dimension], rows)
+
+        def block(start: int) -> xr.DataArray:
+            return self._run(signal.isel({dimension: slice(start, start + rows)}), first, last)
+
+        # the first block says what the whole will look like
+        head = block(0)
+        axis = head.dims.index(dimension)
+        values = np.empty(
+            tuple(
+                signal.sizes.get(name, head.sizes[name]) if name == dimension else head.sizes[name]
+                for name in head.dims
+            ),
+            head.dtype,
+        )
+
+        def keep(start: int, part: xr.DataArray) -> dict[Hashable, Any]:
+            place = [slice(None)] * values.ndim
+            place[axis] = slice(start, start + rows)
+            values[tuple(place)] = part.values
+            return {
+                name: coordinate.variable
+                for name, coordinate in part.coords.items()
+                if dimension in coordinate.dims
+            }
+
+        found = [keep(0, head)]
+        with ThreadPoolExecutor(
+            max_workers=len(os.sched_getaffinity(0))
+            if hasattr(os, "sched_getaffinity")
+            else os.cpu_count()
+        ) as pool:
+            found += pool.map(lambda start: keep(start, block(start)), starts[1:])
+        coords = {name: value for name, value in head.coords.items() if dimension not in value.dims}
+        for name in found[0]:
+            coords[name] = xr.concat(
+                [xr.DataArray(part[name]) for part in found], dimension
+            ).variable
+        return xr.DataArray(values, dims=head.dims, coords=coords, name=head.name, attrs=head.attrs)
+
+    def _lazily(self, signal: xr.DataArray, first: int, last: int) -> xr.DataArray:
+        """The same for an array that dask holds: nothing is computed yet."""
+        signal = signal.chunk({signal.dims[-1]: -1})
+        leading = signal.dims[:-1]
+        one = self._run(signal.isel({name: slice(0, 1) for name in leading}).compute(), first, last)
+        wanted = {name: signal.chunksizes[name] for name in leading}
+        template = one.isel({name: [0] * signal.sizes[name] for name in leading})
+        template = template.assign_coords(
+            {name: signal[name] for name in leading if name in signal.coords}
+        )
+        template = template.chunk({**wanted, one.dims[-1]: -1})
+        return xr.map_blocks(self._run, signal, args=(first, last), template=template)
 
     def __iter__(self) -> Iterator[Call]:
         return iter(self.calls)

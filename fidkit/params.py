@@ -25,6 +25,7 @@ __all__ = [
     "Range",
     "Slider",
     "Step",
+    "Together",
     "Unit",
     "find_step",
     "step",
@@ -89,6 +90,11 @@ class Gives:
     """Marks the return annotation of a step that turns one kind of signal into the other."""
 
     kind: Literal["fid", "spectrum"]
+
+
+@dataclass(frozen=True)
+class Together:
+    """Marks the signal of a step that looks at several records at once: they must not be parted."""
 
 
 @dataclass(frozen=True)
@@ -184,6 +190,7 @@ class Step:
     parameters: Mapping[str, Parameter]
     takes: Literal["fid", "spectrum", "signal"]
     gives: Literal["fid", "spectrum", "signal"]
+    together: bool
     room: str
     summary: str
 
@@ -228,7 +235,8 @@ def step(function: Function) -> Function:
 
     The function takes the signal first (called `fid`, `spectrum`, or `signal` where either will
     do) and everything else by keyword, with a default. It gives the same kind back, unless its
-    return annotation carries `Gives`.
+    return annotation carries `Gives`. Records along leading dimensions must not influence each
+    other, unless the annotation of the signal carries `Together`.
 
     Raises
     ------
@@ -304,7 +312,11 @@ def _read(function: Callable[..., Any]) -> Step:
     summary = (inspect.getdoc(function) or "").split("\n\n")[0].replace("\n", " ")
     if not summary:
         raise TypeError(f"step {name}: needs a docstring")
-    return Step(name, function, parameters, first.name, gives, function.__module__, summary)  # type: ignore[arg-type]
+    together = any(
+        isinstance(mark, Together) for mark in getattr(hints.get(first.name), "__metadata__", ())
+    )
+    takes: Any = first.name
+    return Step(name, function, parameters, takes, gives, together, function.__module__, summary)
 
 
 def _parameter(step_name: str, name: str, hint: Any, default: Any) -> Parameter:

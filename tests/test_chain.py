@@ -6,10 +6,12 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+import xarray as xr
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as some
 
 import fidkit as fk
+import fidkit.chain
 from fidkit.chain import DEEPEST_NESTING, LARGEST_TEXT, MOST_STEPS, Call, Chain
 
 GOOD = '''"""Saved by fidkit 0.1.0: trial"""
@@ -309,3 +311,81 @@ def test_nesting_bound_is_below_what_python_parses():
     inner = "(" * (DEEPEST_NESTING - 2) + "4" + ")" * (DEEPEST_NESTING - 2)
     text = body(f"fid = fk.zero_fill(fid, factor={inner})", "return fid")
     assert Chain.from_source(text).calls == (Call("zero_fill", factor=4),)
+
+
+def many_records(records=40, points=4096, dtype=np.complex64):
+    rng = np.random.default_rng(1)
+    time = 1e-4 * np.arange(points)
+    frequency = rng.uniform(-2000, 2000, records)
+    values = np.exp((2j * np.pi * frequency[:, None] - 40) * time)
+    values = values + 0.01 * rng.standard_normal(values.shape)
+    return fk.from_array(
+        values.astype(dtype),
+        dwell_time=1e-4,
+        carrier_frequency=63.87e6,
+        dims=("channel",),
+        coords={"channel": np.arange(records) + 3},
+    )
+
+
+MANY = fk.Chain(
+    [
+        fk.Call("remove_offset"),
+        fk.Call("apodize_matched"),
+        fk.Call("zero_fill", factor=2),
+        fk.Call("fourier_transform"),
+        fk.Call("auto_phase", first_order=False),
+        fk.Call("correct_phase", zero_order=5.0),
+    ]
+)
+
+
+def test_many_records_in_blocks_give_the_same(monkeypatch):
+    """Source: the same steps, called one after the other by hand."""
+    fid = many_records()
+    whole = fid
+    for call in MANY:
+        whole = call.spec.function(whole, **call.arguments)
+    monkeypatch.setattr(fidkit.chain, "BLOCK_POINTS", 3 * 4096)  # 40 is no multiple of 3
+    blocks = MANY(fid)
+    xr.testing.assert_identical(blocks, whole)
+    cube = fid.expand_dims(pulse_width=2).copy()
+    whole = cube
+    for call in MANY:
+        whole = call.spec.function(whole, **call.arguments)
+    xr.testing.assert_identical(MANY(cube), whole)
+
+
+def test_an_array_of_dask_stays_lazy():
+    """Source: the same chain on the same array in memory."""
+    chain = fk.Chain(call for call in MANY if not call.spec.together)
+    fid = many_records()
+    lazy = chain(fid.chunk(channel=7))
+    assert lazy.chunks is not None
+    xr.testing.assert_identical(lazy.compute(scheduler="synchronous"), chain(fid))
+    # steps that look at several records at once are computed, and say the same
+    xr.testing.assert_identical(MANY(fid.chunk(channel=7)).compute(), MANY(fid))
+
+
+def test_an_error_in_a_block_names_its_step(monkeypatch):
+    monkeypatch.setattr(fidkit.chain, "BLOCK_POINTS", 3 * 4096)
+    chain = fk.Chain([fk.Call("remove_offset"), fk.Call("remove_start", points=5000)])
+    with pytest.raises(fk.FidkitError, match="step 2 of the chain: remove_start"):
+        chain(many_records())
+
+
+@pytest.mark.parametrize("name", [name for name, spec in fk.STEPS.items() if not spec.together])
+def test_records_do_not_influence_each_other(name):
+    """What a chain relies on when it takes many records in blocks."""
+    spec = fk.STEPS[name]
+    fid = many_records(4, 512, np.complex128)
+    given = {"remove_start": {"points": 3}, "remove_end": {"keep_points": 300}}.get(name, {})
+    signal = fk.fourier_transform(fid) if spec.takes == "spectrum" else fid
+    if name == "make_analytic":
+        signal = signal.real
+    together = spec.function(signal, **given)
+    for row in range(4):
+        alone = spec.function(signal[row : row + 1], **given)
+        # sums of several rows may be taken in another order
+        rounding = 1e-12 * float(abs(together[row]).max())
+        assert float(abs(alone[0] - together[row]).max()) <= rounding

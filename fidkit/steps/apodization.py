@@ -18,7 +18,7 @@ import scipy.fft
 import xarray as xr
 
 from fidkit import signals
-from fidkit.params import FidkitError, Range, Slider, Unit, step
+from fidkit.params import FidkitError, Range, Slider, Together, Unit, step
 
 Broadening = Annotated[float, Unit("Hz"), Range(0), Slider(0, 50, 0.1)]
 Fraction = Annotated[float, Unit("fraction"), Range(0, 1), Slider(0, 1, 0.01)]
@@ -195,7 +195,7 @@ def apodize_trapezoid(
 
 
 @step
-def apodize_matched(fid: xr.DataArray) -> xr.DataArray:
+def apodize_matched(fid: Annotated[xr.DataArray, Together()]) -> xr.DataArray:
     """Weight by the exponential that matches the strongest line's own decay, record by record.
 
     The height of that line over the noise is then the greatest that any window gives. A constant

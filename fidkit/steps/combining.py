@@ -10,12 +10,15 @@ import scipy.fft
 import xarray as xr
 
 from fidkit import signals
-from fidkit.params import FidkitError, ParameterError, Range, Slider, Unit, step
+from fidkit.params import FidkitError, ParameterError, Range, Slider, Together, Unit, step
 
 
 @step
 def average_shots(
-    signal: xr.DataArray, *, align_frequency: bool = False, align_phase: bool = False
+    signal: Annotated[xr.DataArray, Together()],
+    *,
+    align_frequency: bool = False,
+    align_phase: bool = False,
 ) -> xr.DataArray:
     """Average over the dimension ``shot``, where wished after aligning the shots.
 
@@ -74,7 +77,7 @@ def average_shots(
 
 @step
 def combine_channels(
-    fid: xr.DataArray,
+    fid: Annotated[xr.DataArray, Together()],
     *,
     method: Literal["whitened", "sum of squares"] = "whitened",
     tail: Annotated[

@@ -11,7 +11,7 @@ import scipy.fft
 import xarray as xr
 
 from fidkit import signals
-from fidkit.params import FidkitError, ParameterError, Range, Slider, Unit, step
+from fidkit.params import FidkitError, ParameterError, Range, Slider, Together, Unit, step
 
 Tail = Annotated[float, Unit("fraction"), Range(0, 1, above=True), Slider(0.01, 0.5, 0.01)]
 Duration = Annotated[float | None, Unit("s"), Range(0), Slider(0, 0.01, 0.00001)]
@@ -132,7 +132,7 @@ def remove_end(
 
 @step
 def remove_filter_delay(
-    fid: xr.DataArray,
+    fid: Annotated[xr.DataArray, Together()],
     *,
     delay: Annotated[float | None, Unit("points"), Range(0, 1e6), Slider(0, 128, 0.01)] = None,
 ) -> xr.DataArray:

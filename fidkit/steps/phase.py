@@ -18,7 +18,7 @@ import scipy.special
 import xarray as xr
 
 from fidkit import signals
-from fidkit.params import Along, FidkitError, Slider, Unit, step
+from fidkit.params import Along, FidkitError, Slider, Together, Unit, step
 
 #: A line stands out where noise alone reaches its magnitude in one record out of so many.
 RECORDS_PER_FALSE_LINE = 1000
@@ -78,7 +78,7 @@ def correct_phase(
 
 @step
 def auto_phase(
-    spectrum: xr.DataArray,
+    spectrum: Annotated[xr.DataArray, Together()],
     *,
     method: Literal["entropy", "integral"] = "entropy",
     first_order: bool = True,
