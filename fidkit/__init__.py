@@ -7,8 +7,6 @@ Three lines do the job::
     print(fk.measure(fid).to_dataframe())
 """
 
-__version__ = "0.1.0"
-
 from typing import TYPE_CHECKING, Any
 
 from fidkit import steps as steps
@@ -26,6 +24,7 @@ from fidkit.params import STEPS as STEPS
 from fidkit.params import FidkitError as FidkitError
 from fidkit.signals import from_array as from_array
 from fidkit.signals import spectrum_from_array as spectrum_from_array
+from fidkit.version import __version__ as __version__
 
 if TYPE_CHECKING:  # the steps again, for editors and type checkers; at run time see below
     from fidkit.steps.apodization import *

@@ -20,6 +20,7 @@ import xarray as xr
 
 from fidkit.files import write_whole
 from fidkit.params import FidkitError, Step, Value, find_step
+from fidkit.version import __version__
 
 __all__ = ["Call", "Chain", "chain_of"]
 
@@ -232,8 +233,6 @@ class Chain:
     @property
     def source(self) -> str:
         """The chain as the Python function that it is."""
-        from fidkit import __version__
-
         title = self.title.replace("\\", "/").replace('"', "'")
         head = f"Saved by fidkit {__version__}" + (f": {title}" if title else ".")
         lines = [f'"""{head}"""', "", "import fidkit as fk", "", "", f"def process({self.takes}):"]
