@@ -404,6 +404,11 @@ def test_archives_of_other_makers_and_damaged_ones(tmp_path):
         fk.read(path)
     path = fk.write(make_fid(), tmp_path / "bench.nc")
     raw = path.read_bytes()
+    value = make_fid().values.real.astype("<f8").tobytes()[:8]
+    assert raw.count(value) == 1
+    path.write_bytes(raw.replace(value, bytes(8)))  # one number changed: the check sum tells
+    with pytest.raises(FidkitError, match=r"^bench\.nc: "):
+        fk.read(path)
     for part in (0.1, 0.5, 0.9):
         path.write_bytes(raw[: int(len(raw) * part)])
         with pytest.raises(FidkitError, match=r"^bench\.nc: "):
@@ -439,6 +444,12 @@ def test_universal_dictionary():
         fk.from_universal(universal(size=5), data)
     with pytest.raises(FidkitError, match="ndim must be"):
         fk.from_universal({"ndim": 2}, data)
+
+
+def test_a_duration_in_place_of_the_width_is_noted():
+    """As nmrglue 0.12 gives it for JCAMP-DX: 2.93 s where 2793 Hz belong."""
+    fid = fk.from_universal(universal(sw=2.93, obs=63.87, size=8192), np.ones(8192) + 0j)
+    assert "pass dwell_time" in fid.attrs["notes"]
 
 
 def test_universal_spectrum_has_the_axis_of_nmrglue():

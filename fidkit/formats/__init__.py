@@ -99,7 +99,8 @@ def read(
             return signal
         return _assemble(_reader(kind)(path, block), given, path.name)
     except FidkitError as error:
-        raise type(error)(f"{path.name}: {error}") from error
+        text = " ".join(str(error).splitlines())
+        raise type(error)(f"{path.name}: {text}") from error
     except OSError as error:
         raise FidkitError(f"{path.name}: cannot be read: {error.strerror or error}") from error
     except MemoryError as error:
@@ -116,7 +117,8 @@ def write(signal: xr.DataArray, path: str | os.PathLike[str]) -> Path:
     path : path-like
         ``.nc`` and ``.zarr`` keep everything to the last bit; ``.npz`` keeps everything with which
         `fidkit.from_array` makes a signal; ``.csv`` and ``.txt`` hold one record in full precision;
-        ``.dx`` and ``.jdx`` one record, rounded to 31 bits. What is there already is replaced.
+        ``.dx`` and ``.jdx`` one record, rounded to 31 bits, with the usual facts only. Tables and
+        JCAMP-DX keep no coordinates beside the axis. What is there already is replaced.
 
     Returns
     -------
@@ -189,6 +191,11 @@ def from_universal(
     ------
     FidkitError
         If the dictionary does not fit the array, or lacks something that is not given here.
+
+    Notes
+    -----
+    For JCAMP-DX nmrglue 0.12 puts the duration of an FID where the width belongs; read such files
+    with `read`, or pass `dwell_time`.
     """
     from fidkit.formats import universal_dictionary
 

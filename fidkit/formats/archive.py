@@ -48,10 +48,21 @@ def write(signal: xr.DataArray, path: Path, kind: str) -> None:
     with replacing(path) as target, warnings.catch_warnings():
         # the way Zarr stores text is still to be put into its specification; it reads back
         warnings.filterwarnings("ignore", message=".*Zarr V3 specification.*")
+        # check sums, so that damage is seen when the file is read
+        sums: dict[str, Any] = {"fletcher32": True}
+        if kind == "Zarr":
+            from zarr.codecs import ZstdCodec
+
+            sums = {"compressors": (ZstdCodec(level=0, checksum=True),)}
+        told = {
+            name: {"_FillValue": None, **sums}
+            for name, item in dataset.variables.items()
+            if item.ndim and item.dtype.kind != "O"
+        }
         if kind == "netCDF":
-            dataset.to_netcdf(target, engine="h5netcdf", format="NETCDF4")
+            dataset.to_netcdf(target, engine="h5netcdf", format="NETCDF4", encoding=told)
         else:
-            dataset.to_zarr(target, zarr_format=3, consolidated=False)
+            dataset.to_zarr(target, zarr_format=3, consolidated=False, encoding=told)
 
 
 def read(path: Path, kind: str, chunks: Any = None) -> xr.DataArray:
@@ -80,6 +91,11 @@ def read(path: Path, kind: str, chunks: Any = None) -> xr.DataArray:
         with warnings.catch_warnings():
             warnings.filterwarnings("ignore", message=".*Zarr V3 specification.*")
             if kind == "netCDF":
+                import h5py
+
+                # h5netcdf trips over its own feet where the head of a file is damaged; see first
+                with h5py.File(path, "r") as file:
+                    dict(file.attrs)
                 with xr.open_dataset(path, engine="h5netcdf", decode_cf=False) as opened:
                     dataset = opened.load()
             else:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import io
 import json
 import math
+import tokenize
 import zipfile
 from pathlib import Path
 from typing import Any, BinaryIO
@@ -25,6 +26,8 @@ TEXTS = ("nucleus", "units", "sample", "coil")
 #: An archive that unpacks to more than this, and to more than a hundred times its size, is refused.
 LARGEST_UNPACKED = 2**28
 COORDINATE = "coordinate_"
+#: What numpy raises on a header that is none.
+UNREADABLE = (ValueError, TypeError, SyntaxError, EOFError, OverflowError, tokenize.TokenError)
 
 
 def read(path: Path) -> Record:
@@ -84,7 +87,7 @@ def _array(file: BinaryIO, size: int, name: str) -> npt.NDArray[Any]:
         values = np.frombuffer(raw, dtype=dtype).reshape(shape, order="F" if fortran else "C")
     except FidkitError:
         raise
-    except (ValueError, TypeError, SyntaxError, EOFError, OverflowError) as error:
+    except UNREADABLE as error:
         raise FidkitError(f"{name} is no readable array: {error}; save it again") from None
     return values.copy()
 

@@ -15,6 +15,8 @@ __all__ = ["read"]
 
 #: What nmrglue puts where it knows nothing.
 PLACEHOLDER = 999.99
+#: A record that lasts longer than this, s, is worth a second look.
+LONGEST = 100.0
 
 
 def read(universal: Mapping[Any, Any], data: Any) -> Record:
@@ -80,6 +82,11 @@ def read(universal: Mapping[Any, Any], data: Any) -> Record:
         record.carrier_frequency = float(f"{observe * 1e6:.15g}")
     if width is not None:
         record.dwell_time = 1 / width
+        if values.shape[-1] / width > LONGEST and direct.get("time"):
+            record.notes.append(
+                f"a width of {width:g} Hz makes the record last {values.shape[-1] / width:.4g} s; for "
+                "some formats nmrglue puts the duration there: then pass dwell_time"
+            )
     try:
         record.nucleus = find_nucleus(str(direct.get("label", ""))).name
     except FidkitError:
