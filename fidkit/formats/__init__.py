@@ -220,7 +220,7 @@ def _kind(path: Path) -> str:
     with path.open("rb") as file:
         head = file.read(65536)
     if not head.strip():
-        raise FidkitError("the file is empty")
+        raise FidkitError("the file is empty; copy or record it again")
     if head.startswith(b"\x93NUMPY"):
         return ".npy"
     if head.startswith(b"PK\x03\x04"):

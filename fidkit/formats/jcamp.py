@@ -425,7 +425,9 @@ def _ntuples(block: Block) -> tuple[Column, dict[str, tuple[Column, Entry]]]:
     if "R" not in pages:
         raise FidkitError("holds no page of real values (R); the file is cut short or damaged")
     if "I" in columns and "I" not in pages:
-        raise FidkitError("SYMBOL promises imaginary values (I), but their page is missing")
+        raise FidkitError(
+            "SYMBOL promises imaginary values (I), but their page is missing; the file is cut short"
+        )
     return columns["X"], pages
 
 
