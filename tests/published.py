@@ -16,7 +16,6 @@ import tarfile
 import tempfile
 from fnmatch import fnmatchcase
 from pathlib import Path
-from typing import NoReturn
 
 import pytest
 
@@ -53,8 +52,19 @@ def _cache() -> Path:
     return Path(os.environ.get("FIDKIT_TEST_CACHE") or Path.home() / ".cache" / "fidkit-tests")
 
 
-@functools.cache
 def _archive() -> Path:
+    found = _fetched()
+    if isinstance(found, str):
+        text = f"the published test records cannot be fetched: {found}"
+        if os.environ.get("CI"):
+            pytest.fail(text, pytrace=False)
+        pytest.skip(text)
+    return found
+
+
+@functools.cache
+def _fetched() -> Path | str:
+    """The archive, or why it cannot be had; asked for once only."""
     target = _cache() / ARCHIVE
     if not _is_right(target):
         with tempfile.TemporaryDirectory() as folder:
@@ -64,12 +74,12 @@ def _archive() -> Path:
             try:
                 done = subprocess.run(command, capture_output=True, text=True, timeout=300)
             except (OSError, subprocess.TimeoutExpired) as error:
-                _missing(str(error))
+                return str(error)
             fetched = Path(folder) / ARCHIVE
             if done.returncode or not fetched.exists():
-                _missing((done.stderr.strip().splitlines() or ["pip fetched no archive"])[-1])
+                return (done.stderr.strip().splitlines() or ["pip fetched no archive"])[-1]
             if not _is_right(fetched):
-                _missing(f"{ARCHIVE} has another sha256 than {SHA256}")
+                return f"{ARCHIVE} has another sha256 than {SHA256}"
             _put(target, fetched.read_bytes())
     return target
 
@@ -85,10 +95,3 @@ def _put(target: Path, content: bytes) -> None:
     with os.fdopen(handle, "wb") as file:
         file.write(content)
     os.replace(name, target)
-
-
-def _missing(reason: str) -> NoReturn:
-    text = f"the published test records cannot be fetched: {reason}"
-    if os.environ.get("CI"):
-        pytest.fail(text, pytrace=False)
-    pytest.skip(text)

@@ -114,6 +114,8 @@ def test_zarr_stays_lazy_where_asked(tmp_path):
     assert fk.read(path).chunks is None
     assert_same(fk.read(fk.write(lazy, tmp_path / "again.zarr")), fid)
     assert_same(fk.read(fk.write(lazy, tmp_path / "again.nc")), fid)
+    uneven = fid.chunk({"channel": (1, 2)})
+    assert_same(fk.read(fk.write(uneven, tmp_path / "uneven.zarr")), fid)
     with pytest.raises(FidkitError, match=r"again\.nc: chunks is for Zarr only"):
         fk.read(tmp_path / "again.nc", chunks={})
 

@@ -44,6 +44,8 @@ def write(signal: xr.DataArray, path: Path, kind: str) -> None:
     FidkitError
         If a coordinate or attribute is of no kind that the format can hold.
     """
+    if signal.chunks is not None:  # Zarr holds blocks of one shape only
+        signal = signal.chunk(dict(zip(signal.dims, map(max, signal.chunks), strict=True)))
     dataset = _packed(signal, split=kind == "netCDF")
     with replacing(path) as target, warnings.catch_warnings():
         # the way Zarr stores text is still to be put into its specification; it reads back
