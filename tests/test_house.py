@@ -23,6 +23,8 @@ FLOORS = {
     "nuclei": 0,
     "signals": 0,
     "files": 0,
+    "threads": 0,
+    "version": 0,
     "display": 0,
     "numerics": 1,
     "steps": 1,
