@@ -10,7 +10,6 @@ import ast
 import itertools
 import os
 from collections.abc import Hashable, Iterable, Iterator, Mapping
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -20,6 +19,7 @@ import xarray as xr
 
 from fidkit.files import write_whole
 from fidkit.params import FidkitError, Step, Value, find_step
+from fidkit.threads import in_threads
 from fidkit.version import __version__
 
 __all__ = ["Call", "Chain", "chain_of"]
@@ -189,12 +189,7 @@ class Chain:
             }
 
         found = [keep(0, head)]
-        with ThreadPoolExecutor(
-            max_workers=len(os.sched_getaffinity(0))
-            if hasattr(os, "sched_getaffinity")
-            else os.cpu_count()
-        ) as pool:
-            found += pool.map(lambda start: keep(start, block(start)), starts[1:])
+        found += in_threads(lambda start: keep(start, block(start)), starts[1:])
         coords = {name: value for name, value in head.coords.items() if dimension not in value.dims}
         for name in found[0]:
             coords[name] = xr.concat(

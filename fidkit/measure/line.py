@@ -17,6 +17,7 @@ from fidkit.measure.standing import measure_standing
 from fidkit.nuclei import find_nucleus
 from fidkit.numerics.lines import ADDITION_COST
 from fidkit.params import FidkitError, ParameterError
+from fidkit.threads import in_threads
 
 __all__ = ["QUANTITIES", "measure"]
 
@@ -101,8 +102,8 @@ def measure(
                 f"measure: needs at least {FEWEST_POINTS} measured points; "
                 f"got {record.values.shape[1]}; record for longer"
             )
-        for block in _blocks(record):
-            results += measure_block(block, wanted)
+        for found in in_threads(lambda block: measure_block(block, wanted), _blocks(record)):
+            results += found
     except Unseen as reason:
         method = METHOD_STANDING
         notes.append(

@@ -164,8 +164,10 @@ def search(
     for decay in decays:
         window = np.exp(-decay / points * index)
         power = np.abs(scipy.fft.fft(values * window, axis=-1)) ** 2 / (window**2).sum()
-        # the median of an exponential distribution is ln 2 of its mean 2 sigma^2
-        noise = np.minimum(noise, np.median(power, axis=-1) / (2 * np.log(2)))
+        # the median of an exponential distribution is ln 2 of its mean 2 sigma^2; some hundreds of
+        # points give it to a few per cent
+        some = power[:, :: max(1, points // 1024)]
+        noise = np.minimum(noise, np.median(some, axis=-1) / (2 * np.log(2)))
         if allowed is not None:
             power = np.where(allowed, power, -1.0)
         top = power.argmax(axis=-1)
