@@ -59,7 +59,7 @@ def measured(first_point_snr, windowed):
             values + noise[0] + 1j * noise[1], dwell_time=DWELL, carrier_frequency=63.87e6
         )
         parts.append(fk.measure(chain(fid) if windowed else fid))
-    names = [name for name in parts[0].data_vars]
+    names = list(parts[0].data_vars)
     return {name: np.concatenate([part[name].values for part in parts]) for name in names}
 
 
