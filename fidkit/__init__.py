@@ -4,7 +4,7 @@ Three lines do the job::
 
     import fidkit as fk
     fid = fk.read("loop.dx")
-    print(fk.measure(fid).to_dataframe())
+    print(fk.table(fk.measure(fid)))
 """
 
 from typing import TYPE_CHECKING, Any
@@ -17,6 +17,7 @@ from fidkit.formats import from_universal as from_universal
 from fidkit.formats import read as read
 from fidkit.formats import write as write
 from fidkit.measure import measure as measure
+from fidkit.measure import table as table
 from fidkit.nuclei import NUCLEI as NUCLEI
 from fidkit.nuclei import field_from_frequency as field_from_frequency
 from fidkit.nuclei import larmor_frequency as larmor_frequency

@@ -73,8 +73,21 @@ def test_the_dataset_is_complete():
         assert found[name].attrs["ancillary_variables"] == f"{name}_std {name}_status"
         assert float(found[f"{name}_std"]) > 0
     assert found.attrs["coil"] == "loop"
-    assert "H" not in found.attrs["history"]
-    assert len(found.to_dataframe()) == 1 if found.sizes else True
+    assert found.attrs["sample"] == "w"
+
+
+def test_the_table():
+    one = fk.measure(record(line(100.0, 5.0) + noise(0.01, 1), source="one.csv"))
+    both = record(np.stack([line(50, 3), line(60, 4)]) + noise(0.01, 2, (2, POINTS)))
+    many = fk.measure(both, lines=2)
+    frame = fk.table(one, many)
+    assert list(frame["source"]) == ["one.csv", "", "", "", ""]
+    assert frame["linewidth"].iloc[0] == float(one.linewidth)
+    assert list(frame["shot"].iloc[1:]) == [0, 0, 1, 1]
+    assert frame["snr"].iloc[1] == float(many.snr[0, 0])
+    assert {f"{name}{end}" for name in QUANTITIES for end in ("", "_std", "_status")} <= set(frame)
+    with pytest.raises(fk.FidkitError, match="at least one result"):
+        fk.table()
 
 
 def test_leading_dimensions_change_nothing():

@@ -2,3 +2,4 @@
 
 from fidkit.measure.line import QUANTITIES as QUANTITIES
 from fidkit.measure.line import measure as measure
+from fidkit.measure.line import table as table

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -19,7 +19,10 @@ from fidkit.numerics.lines import ADDITION_COST
 from fidkit.params import FidkitError, ParameterError
 from fidkit.threads import in_threads
 
-__all__ = ["QUANTITIES", "measure"]
+if TYPE_CHECKING:
+    import pandas
+
+__all__ = ["QUANTITIES", "measure", "table"]
 
 METHOD = (
     "least-squares fit of damped lines to the discrete transform of the record within 25 widths of "
@@ -293,3 +296,39 @@ def _status(line: Line, name: str, lines: int) -> str:
     if name == "t2_star_decay" and lines > 1:
         return line.status.get(name, "missing: the decay is shared by several lines")
     return line.status.get(name, "ok")
+
+
+def table(*results: xr.Dataset) -> pandas.DataFrame:
+    """One row a line: the results of one or many measurements as a table.
+
+    Parameters
+    ----------
+    *results : xarray.Dataset
+        What `measure` gave, of one record each or of many.
+
+    Returns
+    -------
+    pandas.DataFrame
+        Columns: ``source``, the leading dimensions where there are any, then every quantity with
+        its ``_std`` and ``_status``, in the units of `QUANTITIES`.
+
+    Raises
+    ------
+    FidkitError
+        If nothing is given.
+    """
+    import pandas
+
+    if not results:
+        raise FidkitError("table: give at least one result of measure")
+    frames = []
+    for result in results:
+        # a single record has no dimension, and then xarray makes no table of it
+        rows = (
+            result.to_dataframe().reset_index()
+            if result.sizes
+            else result.expand_dims("record").to_dataframe().reset_index(drop=True)
+        )
+        rows.insert(0, "source", str(result.attrs.get("source", "")))
+        frames.append(rows)
+    return pandas.concat(frames, ignore_index=True)
