@@ -198,7 +198,8 @@ def write(signal: xr.DataArray, path: Path) -> None:
             values = values.astype(str)
         if values.dtype.kind not in "biufcUmM":
             raise FidkitError(f"coordinate {name} must be numbers or text; got {values.dtype}")
-        entries[COORDINATE + name] = values
+        # some versions of xarray hang metadata on the dtype of text, which numpy cannot write
+        entries[COORDINATE + name] = values.astype(values.dtype.str)
         facts[name] = {
             "dims": [str(dim) for dim in coordinate.dims],
             "attributes": _plain(coordinate.attrs),
