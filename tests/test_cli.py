@@ -483,10 +483,12 @@ def test_demo_is_made_again_byte_for_byte(tmp_path):
     assert made == kept
     for name in made:
         again = (tmp_path / "one" / name).read_bytes()
-        assert (tmp_path / "two" / name).read_bytes() == again
-        if name.endswith(".nc"):  # its container changes with the version of the HDF5 library
-            assert fk.read(DEMO / name).identical(fk.read(tmp_path / "one" / name))
+        # netCDF: older HDF5 libraries put the time of writing into the container
+        if name.endswith(".nc"):
+            for other in (DEMO / name, tmp_path / "two" / name):
+                assert fk.read(other).identical(fk.read(tmp_path / "one" / name))
         else:
+            assert (tmp_path / "two" / name).read_bytes() == again
             assert (DEMO / name).read_bytes() == again
         assert len(again) < 200_000
     assert sum(path.stat().st_size for path in DEMO.iterdir() if path.is_file()) < 1_000_000
