@@ -28,6 +28,7 @@ import fidkit
 from fidkit import signals
 from fidkit.display import number_text, quantity_text, scaled_unit
 from fidkit.files import write_whole
+from fidkit.measure import QUANTITIES
 
 __all__ = ["main"]
 
@@ -43,11 +44,7 @@ FOLDER_RULE = (
     f"pictures ({' '.join(NO_RECORD_SUFFIXES)})."
 )
 
-#: Quantities in the order of JSON and CSV, and those that the table has room for with their heading.
-QUANTITIES = (
-    *("frequency_offset", "frequency_offset_ppm", "linewidth", "linewidth_ppm"),
-    *("t2_star", "t2_star_decay", "field", "amplitude", "phase", "snr"),
-)
+#: Quantities that the table has room for, with their heading; CSV and JSON hold all.
 TABLE = {
     "frequency_offset": ("", "offset"),
     "linewidth": ("", "linewidth"),

@@ -15,6 +15,14 @@ from fidkit.numerics.bounds import line_bounds
 RECORDS = 2000
 POINTS, DWELL = 8192, 1e-4
 SIGNAL_TO_NOISE = (3, 10, 30, 100, 1000)
+#: One ratio goes to one worker as a whole: the records of a ratio are made and measured once.
+EACH = pytest.mark.parametrize(
+    "first_point_snr",
+    [
+        pytest.param(ratio, marks=pytest.mark.xdist_group(f"ratio {ratio}"))
+        for ratio in SIGNAL_TO_NOISE
+    ],
+)
 #: Root mean square error over the bound; its own counting error is 1 / sqrt(2 * 2000) = 1.6 %.
 NEAR_BOUND = 0.05
 #: Of a normal distribution, one in 5e8 lies further out.
@@ -82,7 +90,7 @@ def errors(first_point_snr, windowed):
 
 
 @pytest.mark.parametrize("windowed", [False, True], ids=["raw", "apodized"])
-@pytest.mark.parametrize("first_point_snr", SIGNAL_TO_NOISE)
+@EACH
 def test_errors_meet_the_bound(first_point_snr, windowed):
     """Source: Cramer-Rao bound of a damped line."""
     for name, (error, bound) in errors(first_point_snr, windowed).items():
@@ -96,7 +104,7 @@ def test_errors_meet_the_bound(first_point_snr, windowed):
 
 
 @pytest.mark.parametrize("windowed", [False, True], ids=["raw", "apodized"])
-@pytest.mark.parametrize("first_point_snr", SIGNAL_TO_NOISE)
+@EACH
 def test_uncertainties_cover(first_point_snr, windowed):
     """Source: definition of a standard uncertainty (normal distribution)."""
     found = measured(first_point_snr, windowed)
@@ -108,7 +116,7 @@ def test_uncertainties_cover(first_point_snr, windowed):
             assert abs(share - level) < COUNTING * counting, (name, level, share)
 
 
-@pytest.mark.parametrize("first_point_snr", SIGNAL_TO_NOISE)
+@EACH
 def test_natural_width_is_unbiased_behind_windows(first_point_snr):
     """Source: an unbiased estimate has mean error 0."""
     found = measured(first_point_snr, True)
@@ -118,7 +126,7 @@ def test_natural_width_is_unbiased_behind_windows(first_point_snr):
     assert abs(bias) < BIAS
 
 
-@pytest.mark.parametrize("first_point_snr", SIGNAL_TO_NOISE)
+@EACH
 def test_plain_lines_are_called_plain(first_point_snr):
     """A criterion difference of 10 is passed by chance about once in ten thousand."""
     found = measured(first_point_snr, False)
@@ -129,7 +137,7 @@ def test_plain_lines_are_called_plain(first_point_snr):
     assert len(doubtful) <= 10, doubtful
 
 
-@pytest.mark.parametrize("first_point_snr", SIGNAL_TO_NOISE)
+@EACH
 def test_signal_to_noise_covers(first_point_snr):
     """Source: height of the line in the plain transform over the noise of its real part, as given.
 
