@@ -171,9 +171,19 @@ def with_care(
             (model, fit, band), values = kept, whole
     tone = original - values
     lines = [_from_crowd(fit, place, record, band, model, noise) for place in range(model.named)]
-    members = [0] if wanted.lines > 1 else _overlapping(fit, resolution)
-    if len(members) > 1:
-        _make_composite(lines[0], fit, members)
+    members = [0]
+    if wanted.lines == 1:
+        members = _overlapping(fit, resolution, 0)
+        if len(members) > 1:
+            _make_composite(lines[0], fit, members)
+    for place in range(model.named if wanted.lines > 1 else 0):
+        others = [n for n in _overlapping(fit, resolution, place) if n >= model.named]
+        if others:
+            where = ", ".join(f"{fit.frequency[n]:.1f}" for n in others)
+            text = f"overlaps with a further line at {where} Hz; ask for more lines"
+            lines[place].notes.append(text)
+            for name in ("frequency_offset", "linewidth", "t2_star", "amplitude", "phase"):
+                lines[place].status.setdefault(name, f"doubtful: {text}")
     lines.sort(key=lambda line: line.frequency)
     lines += [nothing() for _ in range(wanted.lines - model.named)]
     for line in lines:
@@ -203,11 +213,11 @@ def _peaks(
     return tuple(scipy.fft.fftshift(scipy.fft.fftfreq(2 * points, dwell))[peaks].tolist())
 
 
-def _overlapping(fit: Crowd, resolution: float) -> list[int]:
-    """The first line and all that overlap it, directly or through each other; no steady tones."""
+def _overlapping(fit: Crowd, resolution: float, first: int) -> list[int]:
+    """A line and all that overlap it, directly or through each other; no steady tones."""
     width = fit.rate / np.pi + 0.53 * np.sqrt(fit.gaussian) * (np.arange(fit.rate.size) == 0)
     decays = np.array([_decays(fit, resolution, place) for place in range(fit.rate.size)])
-    members = [0]
+    members = [first]
     for member in members:
         apart = np.abs(fit.frequency - fit.frequency[member])
         joined = (apart < width + width[member]) & decays
