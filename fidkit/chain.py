@@ -7,24 +7,29 @@ values are read as literals and checked, and the text is made anew and must mean
 from __future__ import annotations
 
 import ast
+import functools
 import itertools
 import os
-from collections.abc import Hashable, Iterable, Iterator, Mapping
+import warnings
+from collections.abc import Callable, Hashable, Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
+from types import MappingProxyType
 from typing import Any
 
 import numpy as np
 import xarray as xr
 
+from fidkit import signals
 from fidkit.files import write_whole
-from fidkit.params import FidkitError, Step, Value, find_step
+from fidkit.params import FidkitError, Step, Value, find_step, shown
 from fidkit.threads import in_threads
 from fidkit.version import __version__
 
 __all__ = ["Call", "Chain", "chain_of"]
 
-#: Bounds on a chain that comes from outside, in characters and nested brackets.
+#: Bounds on a chain that comes from outside, in characters and levels of its syntax tree: a saved
+#: chain has ten of these.
 LARGEST_TEXT = 64_000
 DEEPEST_NESTING = 20
 MOST_STEPS = 200
@@ -57,7 +62,8 @@ class Call:
     def __init__(self, step: str, arguments: Mapping[str, object] | None = None, /, **more: object):
         found = find_step(step)
         object.__setattr__(self, "step", found.name)
-        object.__setattr__(self, "arguments", found.check({**(arguments or {}), **more}))
+        given = MappingProxyType(found.check({**(arguments or {}), **more}))
+        object.__setattr__(self, "arguments", given)
 
     def __hash__(self) -> int:
         return hash((self.step, tuple(self.arguments.items())))
@@ -93,6 +99,8 @@ class Chain:
     """
 
     def __init__(self, calls: Iterable[Call | str] = (), title: str = ""):
+        if isinstance(calls, str) or not isinstance(calls, Iterable):
+            raise FidkitError(f"a chain is a list of calls and names of steps; got {shown(calls)}")
         self.calls = tuple(call if isinstance(call, Call) else Call(call) for call in calls)
         # what cannot be printed could not be read back either
         self.title = "".join(c for c in " ".join(title.split()) if c.isprintable())[:200]
@@ -130,6 +138,7 @@ class Chain:
         FidkitError
             What a step raises, with its number in the chain.
         """
+        signals.check_signal(signal, "chain")
         for first, last in self._stretches():
             if signal.chunks is not None and not self.calls[first].spec.together:
                 signal = self._lazily(signal, first, last)
@@ -291,7 +300,7 @@ class Chain:
         with path.open("rb") as file:
             raw = file.read(LARGEST_TEXT + 1)
         try:
-            text = raw.decode()
+            text = raw.decode("utf-8-sig")
         except UnicodeDecodeError:
             raise FidkitError(
                 f"{path.name}: a chain is a text file in UTF-8; this is none"
@@ -320,57 +329,35 @@ class Chain:
             If the text holds anything but a chain of known steps with allowed values.
         """
 
-        def refuse(what: str, node: ast.AST | None = None) -> FidkitError:
-            line = f", line {node.lineno}" if isinstance(node, ast.stmt | ast.expr) else ""
-            return FidkitError(
-                f"{name}{line}: {what}; a chain is one function process(...) of fidkit steps, as "
-                "Chain.save writes it"
-            )
-
-        tree = _parsed(text, refuse)
-        body = list(tree.body)
-        title = ""
-        if body and isinstance(body[0], ast.Expr) and isinstance(body[0].value, ast.Constant):
-            title = _title(body.pop(0).value.value)  # type: ignore[attr-defined]
+        refuse = functools.partial(_refusal, name)
+        body, title = _parsed(text, refuse)
         if not body or ast.dump(body[0]) != ast.dump(ast.parse("import fidkit as fk").body[0]):
             raise refuse("expected `import fidkit as fk`", body[0] if body else None)
         if len(body) != 2 or not isinstance(body[1], ast.FunctionDef) or body[1].name != "process":
-            raise refuse(
-                "expected nothing but def process(...)", body[1] if len(body) > 1 else None
-            )
-        statements = body[1].body
-        if not isinstance(statements[-1], ast.Return):
-            raise refuse("expected a return at the end", statements[-1])
+            raise refuse("expected only def process(...)", body[1] if len(body) > 1 else None)
+        *statements, last = body[1].body
+        if not isinstance(last, ast.Return):
+            raise refuse("expected a return at the end", last)
         calls = []
-        for statement in statements[:-1]:
-            value = statement.value if isinstance(statement, ast.Assign) else None
-            if not (
-                isinstance(value, ast.Call)
-                and isinstance(value.func, ast.Attribute)
-                and isinstance(value.func.value, ast.Name)
-                and value.func.value.id == "fk"
-            ):
-                raise refuse("expected a line such as `fid = fk.remove_offset(fid)`", statement)
-            arguments: dict[str, object] = {}
-            for keyword in value.keywords:
-                try:
-                    literal = ast.literal_eval(keyword.value)
-                except (ValueError, TypeError, SyntaxError, MemoryError, RecursionError):
-                    raise refuse(f"{keyword.arg}: only plain values are allowed", value) from None
-                if keyword.arg is None or keyword.arg in arguments:
-                    raise refuse("every argument must be named, once", value)
-                arguments[keyword.arg] = literal
+        for statement in statements:
+            function, arguments = _call(statement, refuse)
             try:
-                calls.append(Call(value.func.attr, arguments))
+                calls.append(Call(function, arguments))
             except FidkitError as error:
                 raise type(error)(f"{name}, line {statement.lineno}: {error}") from None
         try:
             chain = cls(calls, title)
         except FidkitError as error:
             raise FidkitError(f"{name}: {error}") from None
-        again = ast.parse(chain.source)
-        if ast.dump(again.body[2]) != ast.dump(_sorted_arguments(body[1], calls)):
-            raise refuse("the signal must pass from step to step, and nothing else may stand here")
+        # whatever was not looked at above must be as we would write it
+        again = ast.parse(chain.source).body[2]
+        assert isinstance(again, ast.FunctionDef)
+        for ours, theirs, call in zip(again.body, body[1].body, [*calls, None], strict=True):
+            if ast.dump(ours) != ast.dump(_normal(theirs, call)):
+                raise refuse(f"expected `{ast.unparse(ours)}`", theirs)
+        again.body = body[1].body = []
+        if ast.dump(again) != ast.dump(body[1]):
+            raise refuse(f"expected `def process({chain.takes}):`", body[1])
         return chain
 
 
@@ -394,6 +381,7 @@ def chain_of(signal: xr.DataArray, title: str = "") -> Chain:
     FidkitError
         If the history is no list of fidkit steps.
     """
+    signals.is_fid(signal)
     calls = []
     for number, line in enumerate(str(signal.attrs.get("history", "")).splitlines(), 1):
         try:
@@ -408,46 +396,75 @@ def chain_of(signal: xr.DataArray, title: str = "") -> Chain:
                 f"line {number} of the history is no fidkit step: {line[:80]!r}; "
                 "start again from the raw record"
             ) from None
-        calls.append(Call(node.func.id, arguments))
+        try:
+            calls.append(Call(node.func.id, arguments))
+        except FidkitError as error:
+            raise type(error)(f"line {number} of the history: {error}") from None
     return Chain(calls, title)
 
 
-def _parsed(text: str, refuse: Any) -> ast.Module:
+def _refusal(name: str, what: str, node: ast.AST | None = None) -> FidkitError:
+    line = f", line {node.lineno}" if isinstance(node, ast.stmt | ast.expr) else ""
+    return FidkitError(
+        f"{name}{line}: {what}; a chain is one function process(...) of fidkit steps, as "
+        "Chain.save writes it"
+    )
+
+
+def _parsed(text: str, refuse: Callable[..., FidkitError]) -> tuple[list[ast.stmt], str]:
+    """The statements of a text that is short and flat enough, and the title above them."""
     if len(text) > LARGEST_TEXT:
         raise refuse(f"longer than {LARGEST_TEXT} characters")
-    if "\0" in text:
-        raise refuse("holds a null character")
-    depth = deepest = 0
-    for character in text:
-        depth += (character in "([{") - (character in ")]}")
-        deepest = max(deepest, depth)
-    if deepest > DEEPEST_NESTING:
-        raise refuse(f"brackets nested deeper than {DEEPEST_NESTING}")
-    import warnings
-
     try:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")  # odd escapes in a hostile text are none of ours
-            return ast.parse(text)
+            tree = ast.parse(text)
     except SyntaxError as error:
         raise refuse(f"not Python: {error.msg} in line {error.lineno}") from None
     except (MemoryError, RecursionError, ValueError):
-        raise refuse("too deep to read") from None
+        raise refuse("too deep to read, or not text") from None
+    level: list[ast.AST] = [tree]
+    for _ in range(DEEPEST_NESTING):
+        level = [child for node in level for child in ast.iter_child_nodes(node)]
+    if level:
+        raise refuse(f"nested deeper than {DEEPEST_NESTING} levels")
+    body, title = tree.body, ""
+    if body and isinstance(body[0], ast.Expr) and isinstance(body[0].value, ast.Constant):
+        first, *_ = [*str(body[0].value.value).strip().splitlines(), ""]
+        title = first.partition(": ")[2] if first.startswith("Saved by fidkit") else first
+        body = body[1:]
+    return body, title
 
 
-def _title(text: object) -> str:
-    first = str(text).strip().splitlines()[0] if str(text).strip() else ""
-    return first.partition(": ")[2] if first.startswith("Saved by fidkit") else first
+def _call(statement: ast.stmt, refuse: Callable[..., FidkitError]) -> tuple[str, dict[str, object]]:
+    """Name and arguments of the one call that a line of a chain makes."""
+    value = statement.value if isinstance(statement, ast.Assign) else None
+    if not (
+        isinstance(value, ast.Call)
+        and isinstance(value.func, ast.Attribute)
+        and isinstance(value.func.value, ast.Name)
+        and value.func.value.id == "fk"
+    ):
+        raise refuse("expected a line such as `fid = fk.remove_offset(fid)`", statement)
+    arguments: dict[str, object] = {}
+    for keyword in value.keywords:
+        try:
+            literal = ast.literal_eval(keyword.value)
+        except (ValueError, TypeError, SyntaxError, MemoryError, RecursionError):
+            raise refuse(f"{keyword.arg}: only plain values are allowed", value) from None
+        if keyword.arg is None or keyword.arg in arguments:
+            raise refuse("every argument must be named, once", value)
+        arguments[keyword.arg] = literal
+    return value.func.attr, arguments
 
 
-def _sorted_arguments(function: ast.FunctionDef, calls: list[Call]) -> ast.FunctionDef:
-    """The function with each call's arguments in the order of the signature, values normalised."""
-    for statement, call in zip(function.body, calls, strict=False):
-        value = statement.value  # type: ignore[attr-defined]
-        given = {keyword.arg: keyword for keyword in value.keywords}
+def _normal(statement: ast.stmt, call: Call | None) -> ast.stmt:
+    """A line with its arguments in the order of the signature and their values as we write them."""
+    if call is not None and isinstance(statement, ast.Assign):
+        value = statement.value
+        assert isinstance(value, ast.Call)
         value.keywords = [
             ast.keyword(name, ast.parse(repr(wanted), mode="eval").body)
             for name, wanted in call.arguments.items()
-            if name in given
         ]
-    return function
+    return statement

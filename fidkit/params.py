@@ -66,7 +66,7 @@ class Range:
     def __str__(self) -> str:
         opening = "(" if self.above or self.low == -math.inf else "["
         closing = ")" if self.high == math.inf else "]"
-        return f"{opening}{self.low:g}, {self.high:g}{closing}"
+        return f"{opening}{self.low:.15g}, {self.high:.15g}{closing}"
 
 
 @dataclass(frozen=True)
@@ -130,7 +130,7 @@ class Parameter:
         """Return `value` as plain Python, or raise `ParameterError`."""
 
         def refuse() -> ParameterError:
-            return ParameterError(f"{where}: {self.name} must be {self}; got {value!r}")
+            return ParameterError(f"{where}: {self.name} must be {self}; got {shown(value)}")
 
         if value is None:
             if self.optional:
@@ -142,7 +142,7 @@ class Parameter:
                 raise refuse()
             return bool(value)
         if self.kind == "choice":
-            if value not in self.choices:
+            if not isinstance(value, str) or value not in self.choices:
                 raise refuse()
             return str(value)
         if self.kind == "pair":
@@ -162,10 +162,13 @@ class Parameter:
         if not isinstance(value, wanted) or type(value).__name__ in ("bool", "bool_"):
             return None
         try:
-            plain = int(value) if self.kind == "whole number" else float(value)  # type: ignore[call-overload]
+            # as a float first: what does not fit into one is out of every range
+            as_float = float(value)
         except OverflowError:
             return None
-        return plain if plain in self.range else None
+        if as_float not in self.range:
+            return None
+        return int(value) if self.kind == "whole number" else as_float  # type: ignore[call-overload]
 
     def check_along(self, value: Value, signal: Any, where: str) -> None:
         """Raise where a position lies outside the axis it is a position on."""
@@ -177,7 +180,7 @@ class Parameter:
             if not low <= float(part) <= high:
                 raise ParameterError(
                     f"{where}: {self.name} must lie within the {self.along} axis "
-                    f"[{low:g}, {high:g}] {self.unit}; got {part!r}"
+                    f"[{low:g}, {high:g}] {self.unit}; got {shown(part)}"
                 )
 
 
@@ -219,15 +222,31 @@ STEPS: dict[str, Step] = {}
 """Every registered step by name, in the order of definition."""
 
 
+#: What else a signal must be. `fidkit.signals` adds its check here, so that this module needs no
+#: array library.
+SIGNAL_CHECKS: list[Callable[[Any, str], None]] = []
+
+
+def shown(value: object) -> str:
+    """A value as one short line for an error message."""
+    try:
+        text = " ".join(repr(value).split())
+    except Exception:  # a number of more digits than Python prints, or a broken __repr__
+        text = f"a {type(value).__name__} that cannot be shown"
+    return text if len(text) <= 80 else f"{text[:76]} ..."
+
+
 def find_step(name: str) -> Step:
     """Return the step called `name`, or raise `FidkitError` with the nearest names."""
+    if not isinstance(name, str):
+        raise FidkitError(f"a step is called by its name, a text; got {shown(name)}")
     if name in STEPS:
         return STEPS[name]
     import difflib
 
     near = difflib.get_close_matches(name, STEPS, n=3)
     hint = f"did you mean {' or '.join(near)}?" if near else "`fidkit steps` lists them"
-    raise FidkitError(f"there is no step {name!r}; {hint}")
+    raise FidkitError(f"there is no step {shown(name)}; {hint}")
 
 
 def step(function: Function) -> Function:
@@ -293,6 +312,8 @@ def _check_signal(spec: Step, signal: Any) -> None:
             f"{spec.name}: the last dimension must be {' or '.join(wanted[spec.takes])}; "
             f"got {dims[-1]!r}; {remedy}"
         )
+    for check in SIGNAL_CHECKS:
+        check(signal, spec.name)
 
 
 def _read(function: Callable[..., Any]) -> Step:

@@ -21,7 +21,8 @@ first_point           (spectra) how the first point counted: ``full`` or ``half`
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
+from numbers import Integral, Real
 from typing import Any
 
 import numpy as np
@@ -29,11 +30,12 @@ import numpy.typing as npt
 import xarray as xr
 
 from fidkit.nuclei import find_nucleus
-from fidkit.params import FidkitError
+from fidkit.params import SIGNAL_CHECKS, FidkitError, shown
 
 __all__ = [
     "acquired_points",
     "add_note",
+    "check_signal",
     "dwell_time",
     "even_spacing",
     "fid_array",
@@ -118,14 +120,21 @@ def from_array(
     attributes = _attributes(
         carrier_frequency, nucleus, units, sample, coil, source, more, long_name="signal"
     )
-    return fid_array(
-        values,
-        dwell=_number(dwell_time, "dwell_time", "s", positive=True),
-        start=_number(time_start, "time_start", "s"),
-        dims=leading,
-        coords=coords,
-        attributes=attributes,
+    dwell = _number(dwell_time, "dwell_time", "s", positive=True)
+    start = _number(time_start, "time_start", "s")
+    given = _checked_coords(coords, values.shape[:-1], leading)
+    fid = fid_array(
+        values, dwell=dwell, start=start, dims=leading, coords=given, attributes=attributes
     )
+    check_signal(fid, "from_array")
+    carrier = float(attributes["carrier_frequency"])
+    if carrier * dwell < 1:
+        add_note(
+            fid,
+            f"the spectral width of {1 / dwell:g} Hz is larger than the carrier of {carrier:g} Hz: "
+            "is carrier_frequency in Hz?",
+        )
+    return fid
 
 
 def spectrum_from_array(
@@ -164,7 +173,10 @@ def spectrum_from_array(
         If a value is missing, not finite or out of range, or the axis is uneven.
     """
     values = _values(data, "data")
-    axis = np.asarray(frequency, dtype=float)
+    axis = _values(frequency, "frequency")
+    if np.iscomplexobj(axis):
+        raise FidkitError("frequency must be real numbers of Hz; got complex ones")
+    axis = axis.astype(float)
     if axis.shape != values.shape[-1:] or axis.size < 2:
         raise FidkitError(
             f"frequency must have one value a point and at least 2; got {axis.shape} for {values.shape}"
@@ -176,9 +188,8 @@ def spectrum_from_array(
     attributes = _attributes(
         carrier_frequency, nucleus, units, sample, coil, source, more, long_name="spectrum"
     )
-    return spectrum_array(
-        values, frequency=axis, dims=leading, coords=coords, attributes=attributes
-    )
+    given = _checked_coords(coords, values.shape[:-1], leading)
+    return spectrum_array(values, frequency=axis, dims=leading, coords=given, attributes=attributes)
 
 
 def fid_array(
@@ -195,6 +206,8 @@ def fid_array(
         key: value for key, value in attributes.items() if key not in ("time_start", "first_point")
     }
     kept["long_name"] = "signal"
+    if kept.get("acquired_points", 0) > values.shape[-1]:
+        del kept["acquired_points"]  # of a longer record than what is left
     return xr.DataArray(
         values,
         dims=(*dims, "time"),
@@ -266,13 +279,71 @@ def is_fid(signal: xr.DataArray) -> bool:
     )
 
 
-def even_spacing(axis: npt.NDArray[np.float64], name: str, unit: str) -> float:
+def check_signal(signal: Any, where: str) -> None:
+    """Raise `FidkitError` unless something is a signal that steps and measurements can trust.
+
+    Parameters
+    ----------
+    signal : object
+        What was given.
+    where : str
+        Who asks, for the message.
+    """
+    in_time = is_fid(signal)
+    name, unit = ("time", "s") if in_time else ("frequency", "Hz")
+    for other in signal.dims[:-1]:
+        if other in ("time", "frequency", "shift"):
+            raise FidkitError(
+                f"{where}: {other} may be the last dimension only; got {signal.dims}; rename it"
+            )
+    if signal.size == 0 or signal.shape[-1] < 2:
+        raise FidkitError(
+            f"{where}: a signal needs at least one record of 2 points; got shape {signal.shape}"
+        )
+    if name not in signal.coords or signal[name].dtype.kind not in "fiu":
+        got = f"values of type {signal[name].dtype}" if name in signal.coords else "none"
+        raise FidkitError(
+            f"{where}: the signal needs a {name} coordinate, numbers in {unit}; got {got}; "
+            "take it from the record as it was read"
+        )
+    even_spacing(signal[name].values, f"{where}: {name}", unit)
+    carrier = signal.attrs.get("carrier_frequency")
+    if not isinstance(carrier, Real) or not 0 < float(carrier) < np.inf:
+        raise FidkitError(
+            f"{where}: the attribute carrier_frequency must be a positive number of Hz; got "
+            f"{shown(carrier)}; arithmetic may have dropped it: set it, or use .copy(data=...)"
+        )
+    # of a spectrum a part may be cut out, of an FID with zeros not
+    most = signal.shape[-1] if in_time else np.inf
+    measured = signal.attrs.get("acquired_points", 1)
+    if not isinstance(measured, Integral) or not 0 < int(measured) <= most:
+        raise FidkitError(
+            f"{where}: the attribute acquired_points must be a whole number in [1, {most}], the "
+            f"points here; got {shown(measured)}; shorten a record with "
+            "remove_start and remove_end, which keep count"
+        )
+
+
+SIGNAL_CHECKS.append(check_signal)
+
+
+def even_spacing(axis: npt.NDArray[Any], name: str, unit: str) -> float:
     """The mean spacing of an axis, or `FidkitError` where it is uneven or does not ascend."""
+    if axis.size < 2 or not np.isfinite(axis).all():
+        raise FidkitError(
+            f"{name} must hold at least 2 values, all finite; got {shown(axis)} {unit}"
+        )
+    axis = np.asarray(axis, dtype=float)
     spacing = float((axis[-1] - axis[0]) / (axis.size - 1))
-    if not np.isfinite(spacing) or spacing <= 0:
+    if spacing <= 0:
         raise FidkitError(f"{name} must ascend evenly; got {axis[0]:g} to {axis[-1]:g} {unit}")
     # rounding of large coordinates is allowed for: a few units in the last place
     rounding = 4 * np.finfo(float).eps * float(np.abs(axis[[0, -1]]).max())
+    if rounding > EVEN_SPACING * spacing:
+        raise FidkitError(
+            f"{name} must keep its spacing of {spacing:g} {unit} in double precision; got values of "
+            f"{axis[-1]:g} {unit}; count from the pulse instead of from a date"
+        )
     off = np.abs(np.diff(axis) - spacing)
     worst = int(np.argmax(off))
     if off[worst] > EVEN_SPACING * spacing + rounding:
@@ -286,7 +357,8 @@ def even_spacing(axis: npt.NDArray[np.float64], name: str, unit: str) -> float:
 
 def dwell_time(fid: xr.DataArray) -> float:
     """Time between points, s, from the axis."""
-    return even_spacing(np.asarray(fid["time"].values, dtype=float), "time", "s")
+    axis = fid["time"].values
+    return float((axis[-1] - axis[0]) / (axis.size - 1))
 
 
 def time_start(fid: xr.DataArray) -> float:
@@ -296,8 +368,8 @@ def time_start(fid: xr.DataArray) -> float:
 
 def spectral_width(spectrum: xr.DataArray) -> float:
     """Points times spacing of the frequency axis, Hz: one over the dwell time."""
-    axis = np.asarray(spectrum["frequency"].values, dtype=float)
-    return even_spacing(axis, "frequency", "Hz") * axis.size
+    axis = spectrum["frequency"].values
+    return float((axis[-1] - axis[0]) / (axis.size - 1) * axis.size)
 
 
 def acquired_points(signal: xr.DataArray) -> int:
@@ -347,11 +419,40 @@ def _leading_coords(dims: Sequence[str], coords: Mapping[str, Any] | None) -> di
     return kept
 
 
-def _values(data: npt.ArrayLike, name: str) -> npt.NDArray[Any]:
+def _checked_coords(
+    coords: Mapping[str, Any] | None, shape: tuple[int, ...], dims: Sequence[str]
+) -> Mapping[str, Any]:
+    """Coordinates as given, if they fit the leading dimensions."""
+    if coords is None:
+        return {}
+    taken = {"time", "frequency", "shift"}
+    if not isinstance(coords, Mapping) or taken & {str(name) for name in coords}:
+        raise FidkitError(
+            f"coords must name coordinates of the leading dimensions {tuple(dims)}; got "
+            f"{shown(coords)}; the signal axis follows from the other arguments"
+        )
     try:
-        values = np.asarray(data)
-    except ValueError as error:
-        raise FidkitError(f"{name} must be an array of numbers; {error}") from None
+        xr.DataArray(np.zeros(shape), dims=tuple(dims), coords=coords)
+    except (ValueError, TypeError) as error:
+        raise FidkitError(
+            f"coords must fit the leading dimensions {dict(zip(dims, shape, strict=True))}; "
+            f"{shown(str(error))}"
+        ) from None
+    return coords
+
+
+def _values(data: npt.ArrayLike, name: str) -> npt.NDArray[Any]:
+    if np.ma.isMaskedArray(data) and np.ma.getmaskarray(data).any():
+        raise FidkitError(
+            f"{name} must have no masked values; got {int(np.ma.getmaskarray(data).sum())}; "
+            "cut them out or fill them"
+        )
+    try:
+        # a copy: an acquisition may use its buffer again
+        values = np.array(data)
+    except (ValueError, TypeError) as error:
+        raise FidkitError(f"{name} must be an array of numbers; {shown(str(error))}") from None
+    values = values.astype(values.dtype.newbyteorder("="), copy=False)
     if values.dtype.kind not in "iufc":
         raise FidkitError(f"{name} must be an array of numbers; got {values.dtype}")
     if values.dtype.kind in "iu" or values.dtype == np.float16:
@@ -376,10 +477,12 @@ def _number(value: Any, name: str, unit: str, *, positive: bool = False) -> floa
         raise FidkitError(f"{name} must be {allowed}; got {value!r}")
     try:
         number = float(value)
-    except (TypeError, ValueError):
-        raise FidkitError(f"{name} must be {allowed}; got {value!r}; please give {name}") from None
+    except (TypeError, ValueError, OverflowError):
+        raise FidkitError(
+            f"{name} must be {allowed}; got {shown(value)}; please give {name}"
+        ) from None
     if not np.isfinite(number) or (positive and number <= 0):
-        raise FidkitError(f"{name} must be {allowed}; got {value!r}")
+        raise FidkitError(f"{name} must be {allowed}; got {shown(value)}")
     return number
 
 
@@ -390,13 +493,15 @@ def _leading(ndim: int, dims: Sequence[str] | None, last: str) -> tuple[str, ...
         return LEADING[ndim]
     if isinstance(dims, str):
         dims = (dims,)
+    if not isinstance(dims, Iterable):
+        raise FidkitError(f"dims must be a list of names; got {shown(dims)}")
     names = tuple(str(name) for name in dims)
     if names and names[-1] == last:
         names = names[:-1]
     if (
         len(names) != ndim - 1
         or len(set(names)) != len(names)
-        or {"time", "frequency"} & set(names)
+        or {"time", "frequency", "shift"} & set(names)
     ):
         raise FidkitError(
             f"dims must name the {ndim - 1} leading dimensions, each once, then {last}; got {dims!r}"

@@ -389,3 +389,61 @@ def test_records_do_not_influence_each_other(name):
         # sums of several rows may be taken in another order
         rounding = 1e-12 * float(abs(together[row]).max())
         assert float(abs(alone[0] - together[row]).max()) <= rounding
+
+
+@pytest.mark.parametrize(
+    ("change", "message"),
+    [
+        (("factor=4.0", "points=0x" + "f" * 5000), "line 8: zero_fill: points must be"),
+        (("factor=4.0", "points=1" + "0" * 400), "line 8: zero_fill: points must be"),
+        (("factor=4.0", "factor=" + "+".join(["1"] * 990)), "nested deeper"),
+        (("factor=4.0", "factor=" + "-" * 5000 + "1"), "chain"),
+        (("factor=4.0", "factor=" + "(" * 5000 + "1" + ")" * 5000), "chain"),
+        (
+            ("fk.zero_fill(fid, factor=4.0)", "fk.zero_fill(fid, 4.0)"),
+            "line 8: expected `fid = fk.z",
+        ),
+        (("fid = fk.zero_fill", "other = fk.zero_fill"), "line 8: expected `fid = fk.zero_fill"),
+        (("def process(fid):", "def process(fid, more=1):"), "expected `def process(fid):`"),
+        (("return spectrum", "return fid"), "line 10: expected `return spectrum`"),
+    ],
+)
+def test_refusals_name_the_line_and_what_is_expected(change, message):
+    with pytest.raises(fk.FidkitError) as error:
+        Chain.from_source(GOOD.replace(*change))
+    assert message in str(error.value)
+    assert "\n" not in str(error.value)
+    assert len(str(error.value)) < 400
+
+
+def test_harmless_edits_by_hand_are_taken(tmp_path):
+    text = GOOD.replace("broadening=1.5)", "broadening = 15e-1 )").replace("4.0", "4")
+    text = text.replace("    return", "\n    # done :-( :-( (((\n    return")
+    path = tmp_path / "edited.py"
+    path.write_bytes(b"\xef\xbb\xbf" + text.replace("\n", "\r\n").encode())
+    assert Chain.load(path) == Chain.from_source(GOOD)
+
+
+@pytest.mark.parametrize(
+    "calls", ["fourier_transform", [None], [fk.zero_fill], 5, [["zero_fill"]], [Call]]
+)
+def test_what_is_no_list_of_calls(calls):
+    with pytest.raises(fk.FidkitError):
+        Chain(calls)
+
+
+def test_a_call_does_not_change():
+    call = Call("apodize_exponential", broadening=1.0)
+    with pytest.raises(TypeError):
+        call.arguments["broadening"] = -5.0
+    assert hash(call) == hash(Call("apodize_exponential", broadening=1.0))
+
+
+def test_history_that_is_no_history():
+    fid = many_records(1, 64)
+    with pytest.raises(fk.FidkitError, match="line 2 of the history: zero_fill: points must"):
+        fk.chain_of(fid.assign_attrs(history="remove_offset()\nzero_fill(points=-1)"))
+    with pytest.raises(fk.FidkitError, match="line 1 of the history is no fidkit step"):
+        fk.chain_of(fid.assign_attrs(history="__import__('os').getcwd()"))
+    with pytest.raises(fk.FidkitError, match="a signal is a DataArray"):
+        fk.chain_of(np.ones(4))

@@ -130,15 +130,14 @@ def _checked(
     lines: int,
     noise: tuple[float, float] | None,
 ) -> Wanted:
+    signals.check_signal(signal, "measure")
     in_time = signals.is_fid(signal)
-    if signal.size == 0:
-        raise FidkitError(f"measure: the signal holds no record; got shape {signal.shape}")
     if not np.isfinite(signal.values).all():
         raise FidkitError("measure: the signal must be finite; cut out or repair its NaN values")
-    if "carrier_frequency" not in signal.attrs or "nucleus" not in signal.attrs:
+    if "nucleus" not in signal.attrs:
         raise FidkitError(
-            "measure: the attributes carrier_frequency [Hz] and nucleus are missing; "
-            "arithmetic may have dropped them; set them, or start from fidkit.from_array"
+            "measure: the attribute nucleus is missing; arithmetic may have dropped it; set it, or "
+            "use .copy(data=...)"
         )
     if in_time:
         half = 0.5 / signals.dwell_time(signal)
