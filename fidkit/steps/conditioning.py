@@ -22,9 +22,18 @@ REACH = 32
 #: How far, in points, the first kept point may lie before time zero: it is then taken for time
 #: zero itself, so that a delay found as 61.003 does not cost a point.
 AT_ZERO = 0.05
-#: What the unknown shape of the filter may do to a delay found from a record, points: bias seen
-#: with pass bands of 75 to 90 % of the spectrum.
-FILTER_SHAPE = 0.005
+#: What the unknown shape of the filter does to a delay found from a record, as a fraction of how
+#: far the edge is from the model's (in points): seen with pass bands of 75 to 100 % of the spectrum.
+FILTER_SHAPE = 0.04
+#: Least noise that a record is taken to have, as a fraction of its height: what is smaller may be
+#: the filter's stop band.
+LEAST_NOISE = 1e-3
+#: Noise, as a fraction of the height, that hides the ringing of the filter after the edge.
+HIDES_RINGING = 5e-3
+#: A delay known no better than this, in points, is not given.
+LARGEST_ERROR = 0.02
+#: How many points may be rebuilt: each leans on the ones after it.
+MOST_REBUILT = 4096
 #: Records from which one common filter delay is found: the strongest.
 DELAY_RECORDS = 16
 
@@ -155,7 +164,7 @@ def remove_filter_delay(
     ------
     FidkitError
         For a real-valued record, a delay longer than the record, or where no delay was given and
-        the record shows no build-up or too much noise to find it.
+        the record shows no build-up, or shows its delay to no better than 0.02 points.
 
     Notes
     -----
@@ -171,8 +180,10 @@ def remove_filter_delay(
     The delay is found as the shift of a band-limited step times the sum of decays that the later
     part of the record shows (matrix pencil: Hua and Sarkar, IEEE Trans. Acoust. Speech Signal
     Process. 38, 814 (1990), from memory). Its uncertainty is that of a shift in white noise and of
-    the decays carried back, with 0.005 point for the unknown shape of the filter. That a delay is a
-    first-order phase, 360 degrees a dwell time over the spectral width, is the delay theorem.
+    the decays carried back, with a share of the misfit of the edge for the unknown shape of the
+    filter. Signal up to 1/1,000 of the highest point is taken for noise, as a stop band may ring so
+    far. That a delay is a first-order phase, 360 degrees a dwell time over the spectral width, is
+    the delay theorem.
     """
     where = "remove_filter_delay"
     signals.require_complex(fid, where)
@@ -197,7 +208,9 @@ def remove_filter_delay(
     result = _cut(fid, first, None)
     if first:
         build_up = _mirrored(fid.values[..., : signals.acquired_points(fid)], delay, first)
-        result.values[..., : build_up.shape[-1]] += build_up.astype(fid.dtype)
+        values = result.values.copy()  # of a record that dask holds: computed here
+        values[..., : build_up.shape[-1]] += build_up.astype(fid.dtype)
+        result = result.copy(data=values)
     start = float(fid["time"].values[first]) - delay * dwell
     result = result.assign_coords(time=signals.time_coordinate(result.sizes["time"], dwell, start))
     result.attrs.pop("filter_delay", None)
@@ -210,7 +223,7 @@ def remove_filter_delay(
 def rebuild_start(
     fid: xr.DataArray,
     *,
-    points: Annotated[int | None, Range(1, 4096), Slider(1, 64, 1)] = None,
+    points: Annotated[int | None, Range(1, MOST_REBUILT), Slider(1, 64, 1)] = None,
     coefficients: Annotated[int, Range(1, 1024), Slider(1, 128, 1)] = 32,
     fit_points: Annotated[int | None, Range(2, 65536), Slider(16, 2048, 1)] = None,
 ) -> xr.DataArray:
@@ -237,7 +250,8 @@ def rebuild_start(
     ParameterError
         If the fit has fewer than two points a coefficient, or more points than were measured.
     FidkitError
-        If a filter delay that the file states was not removed first.
+        If a filter delay that the file states was not removed first, the record starts more than
+        4096 points after time zero and `points` is not given, or a point of the fit is not finite.
 
     Notes
     -----
@@ -254,6 +268,11 @@ def rebuild_start(
     measured = signals.acquired_points(fid)
     if points is None:
         points = max(0, math.floor(start / dwell + AT_ZERO))
+        if points > MOST_REBUILT:
+            raise FidkitError(
+                f"{where}: at most {MOST_REBUILT} points may be rebuilt; the record starts {start:g} "
+                f"s after the pulse, {points} points; give points, or mend the time axis"
+            )
     if not points:
         return fid.copy()
     if fit_points is None:
@@ -268,6 +287,11 @@ def rebuild_start(
     values[..., points:] = fid.values
     for row in np.ndindex(fid.shape[:-1]):
         known = fid.values[row][:fit_points].astype(wide)
+        if not np.isfinite(known).all():
+            raise FidkitError(
+                f"{where}: the first {fit_points} points of every record must be finite; got some "
+                "that are not; cut them out or leave that record out"
+            )
         prediction = _backward_prediction(known, coefficients)
         work = np.concatenate([np.zeros(points, wide), known[:coefficients]])
         for place in range(points - 1, -1, -1):
@@ -517,31 +541,45 @@ def _find_delay(fid: xr.DataArray) -> tuple[float, float]:
     energy = np.sum(np.abs(values) ** 2, axis=-1, dtype=np.float64)
     chosen = np.argsort(-energy, kind="stable")[:DELAY_RECORDS]
     answers = [_delay_of(values[row].astype(np.complex128)) for row in chosen]
-    answers = [answer for answer in answers if answer is not None and answer[1] < 0.1]
-    if not answers:
+    found = [answer for answer in answers if answer is not None]
+    if not found:
         raise FidkitError(
             "remove_filter_delay: no build-up of a digital filter stands out at the start of the "
             "record; give delay in points, or leave the step out if there was no such filter"
         )
-    delays, errors = np.array(answers).T
-    weight = errors**-2.0
-    error = math.hypot(float(weight.sum()) ** -0.5, FILTER_SHAPE)
-    return float(np.sum(weight * delays) / weight.sum()), error
+    delays, errors, shapes = np.array(found).T
+    weight = errors**-2.0 / np.sum(errors**-2.0)
+    error = math.hypot(float(np.linalg.norm(weight * errors)), float(weight @ shapes))
+    if error > LARGEST_ERROR:
+        raise FidkitError(
+            f"remove_filter_delay: a delay is found where it shows to {LARGEST_ERROR:g} points or "
+            f"better; this record leaves {error:.2g} points; average more shots, or give delay in "
+            "points"
+        )
+    return float(weight @ delays), error
 
 
-def _delay_of(record: npt.NDArray[np.complex128]) -> tuple[float, float] | None:
-    """Delay and standard uncertainty from one record, or None where it shows no build-up."""
+def _delay_of(record: npt.NDArray[np.complex128]) -> tuple[float, float, float] | None:
+    """Delay, its standard uncertainty from noise and that from the shape of the filter (points).
+
+    None where the record shows no build-up.
+    """
     size = np.abs(record)
     rough = int(np.argmax(size > 0.5 * size.max()))
     reach = min(rough, REACH)
-    settled = record[rough + reach : rough + reach + 512]
-    if rough < 2 or settled.size < 64:
-        return None
-    rates, amplitudes, sigma = _decays(settled)
+    # the filter is twice as long as its delay: what follows is decays and noise alone. Only where
+    # noise hides its ringing may they be looked for right behind the edge, where they are larger
+    for first in (2 * rough + 4, rough + reach):
+        settled = record[first : first + 512]
+        if rough < 2 or settled.size < 64:
+            return None
+        rates, amplitudes, sigma = _decays(settled, LEAST_NOISE * float(size.max()))
+        if sigma < HIDES_RINGING * size.max():
+            break
     if not rates.size:
         return None
     # counted from where the record has settled, the build-up is at negative times
-    index = np.arange(-2 * reach, 1)
+    index = np.arange(rough - reach, rough + reach + 1) - first
     edge = record[rough - reach : rough + reach + 1]
     fine = np.arange(-reach - 2, reach + 2, 1 / 64)
     kernel = np.sinc(fine) * np.i0(4 * np.sqrt(np.clip(1 - (fine / (reach + 2)) ** 2, 0, None)))
@@ -550,7 +588,7 @@ def _delay_of(record: npt.NDArray[np.complex128]) -> tuple[float, float] | None:
     weighted = kernel * np.exp(-np.outer(rates, fine))
     rise = np.cumsum(weighted, axis=1) - weighted / 2
     lines = np.exp(np.outer(rates, index))
-    delay = -float(reach)
+    delay = float(rough - first)
     for _ in range(20):
         steps = lines * [
             np.interp(index - delay, fine, part.real)
@@ -560,13 +598,14 @@ def _delay_of(record: npt.NDArray[np.complex128]) -> tuple[float, float] | None:
         height = np.sum(amplitudes * np.exp(rates * delay))
         slope = -height * np.interp(index - delay, fine, kernel * 64)
         energy = float(np.sum(np.abs(slope) ** 2))
-        change = float(np.real(np.vdot(slope, edge - amplitudes @ steps))) / energy
+        misfit = edge - amplitudes @ steps
+        change = float(np.real(np.vdot(slope, misfit))) / energy
         delay += min(max(change, -0.5), 0.5)
         if abs(change) < 1e-5:
             break
     else:
         return None
-    if abs(delay + reach) > 3:
+    if abs(first + delay - rough) > 3:
         return None
     # noise at the edge, and the uncertainty of the lines that are carried back to it
     later = np.arange(settled.size)
@@ -576,30 +615,29 @@ def _delay_of(record: npt.NDArray[np.complex128]) -> tuple[float, float] | None:
     _, triangle = np.linalg.qr(jacobian.T)
     lent = np.linalg.lstsq(triangle.T, carried, rcond=None)[0]
     error = sigma * math.sqrt(1 / energy + float(np.sum(np.abs(lent) ** 2)))
-    return rough + reach + delay, max(error, 1e-6)  # of a record without noise: rounding
+    return first + delay, error, FILTER_SHAPE * float(np.linalg.norm(misfit)) / math.sqrt(energy)
 
 
 def _decays(
-    record: npt.NDArray[np.complex128],
+    record: npt.NDArray[np.complex128], floor: float
 ) -> tuple[npt.NDArray[Any], npt.NDArray[Any], float]:
     """Rates a point and amplitudes of the damped lines in a record, by matrix pencil; the noise."""
     width = min(record.size // 3, 100)
     hankel = np.lib.stride_tricks.sliding_window_view(record, width + 1)
     _, singular, right = np.linalg.svd(hankel, full_matrices=False)
-    sigma = _noise_level(singular, hankel.shape)
+    sigma = max(_noise_level(singular, hankel.shape), floor)
     kept = right[: _above_noise(singular, hankel.shape, sigma)].T
     poles = np.linalg.eigvals(np.linalg.pinv(kept[:-1]) @ kept[1:])
     rates = np.log(poles[(np.abs(poles) < 1.0005) & (np.abs(poles) > 0.5)])
-    for _ in range(2):
+    while True:
         basis = np.exp(np.outer(np.arange(record.size), rates))
         amplitudes = np.linalg.lstsq(basis, record, rcond=None)[0]
-        sigma = math.sqrt(float(np.mean(np.abs(record - basis @ amplitudes) ** 2)) / 2)
+        left = math.sqrt(float(np.mean(np.abs(record - basis @ amplitudes) ** 2)) / 2)
         # a line that noise feigns would grow without bound when it is carried back
-        strong = np.linalg.norm(basis, axis=0) * np.abs(amplitudes) > 5 * sigma
+        strong = np.linalg.norm(basis, axis=0) * np.abs(amplitudes) > 5 * max(left, floor)
         if strong.all():
-            break
+            return rates, amplitudes, max(left, floor)
         rates = rates[strong]
-    return rates, amplitudes, sigma
 
 
 def _backward_prediction(known: npt.NDArray[Any], coefficients: int) -> npt.NDArray[Any]:
