@@ -132,6 +132,8 @@ def test_step_survives_a_saved_chain(spec: Step) -> None:
 @pytest.mark.parametrize("spec", HERE, ids=lambda spec: spec.name)
 def test_records_that_dask_holds_come_out_the_same(spec: Step) -> None:
     fid = record(spec, (2,))
+    if spec.name == "remove_filter_delay":
+        fid = fid.copy(data=np.stack([filtered(20.25, (0.1,), 0.004, 256)] * 2))
     chunked = spec.function(fid.chunk({"shot": 1, "time": 100}), **working(spec.name))
     plain = spec.function(fid, **working(spec.name))
     assert np.array_equal(chunked.values, plain.values)
@@ -433,13 +435,21 @@ def test_delay_of_a_line_at_the_edge_of_the_filter_is_refused() -> None:
         fk.remove_filter_delay(make(values))
 
 
-def test_every_line_dropped_as_noise_is_no_crash() -> None:
-    """At this noise the pencil gives lines of which some are too weak, round after round."""
-    rng = np.random.default_rng(0)
-    for _ in range(20):
-        values = filtered(40.5, (0.03,), 0.003, 1024, band=0.75) + noise(rng, 1024, 0.005)
-        found, error = conditioning._find_delay(make(values))
-        assert abs(found - 40.5) < 4 * error
+@pytest.mark.parametrize("level", [0.005, 0.02])
+def test_lines_that_noise_feigns_are_dropped_round_after_round(level: float) -> None:
+    """Noise through the same filter, of which this seed feigns lines that go in two rounds."""
+    rng, oversampling, points = np.random.default_rng(0), 16, 4096
+    fine = np.arange(points * oversampling) / oversampling
+    white = rng.normal(size=fine.size) + 1j * rng.normal(size=fine.size)
+    signal = np.exp(0.4j + (0.06j * np.pi - 0.003) * fine)
+    signal[0] *= 0.5
+    taps = scipy.signal.firwin(
+        round(81 * oversampling) + 1, 0.75 / oversampling, window=("kaiser", 4)
+    )
+    values = scipy.signal.fftconvolve(signal + level * math.sqrt(oversampling) * white, taps)
+    record = values[: fine.size : oversampling]
+    delay, error, shape = conditioning._delay_of(record)
+    assert abs(delay - 40.5) < 4 * math.hypot(error, shape)
 
 
 @pytest.mark.parametrize(
