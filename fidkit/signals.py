@@ -42,6 +42,7 @@ __all__ = [
     "frequency_coordinates",
     "from_array",
     "is_fid",
+    "like",
     "points_in",
     "require_complex",
     "spectral_width",
@@ -240,6 +241,21 @@ def spectrum_array(
         },
         name="spectrum",
         attrs=kept,
+    )
+
+
+def like(signal: xr.DataArray, values: npt.NDArray[Any], **axis: Any) -> xr.DataArray:
+    """Values on a new axis, with the leading dimensions and facts of a signal (for steps).
+
+    The axis is `dwell` and `start` of an FID, or `frequency` of a spectrum.
+    """
+    make = spectrum_array if "frequency" in axis else fid_array
+    return make(
+        values,
+        dims=[str(name) for name in signal.dims[:-1]],
+        coords={str(name): value for name, value in signal.coords.items()},
+        attributes={str(name): value for name, value in signal.attrs.items()},
+        **axis,
     )
 
 
