@@ -6,6 +6,8 @@ No published source: round trips are exact by definition, and what is refused is
 from __future__ import annotations
 
 import io
+import os
+import re
 import subprocess
 import sys
 import zipfile
@@ -354,6 +356,13 @@ MALFORMED = {
     "twice.csv": (table("time_s,real,real", TIME, REAL, REAL), "names real twice"),
     "lonely.csv": (table("time_s,imag", TIME, REAL), "must name real (and imag), or signal"),
     "disagrees.csv": ("# dwell_time_s: 0.002\n" + GOOD, "but dwell_time_s says 0.002 s"),
+    "twice_stated.csv": ("# carrier_frequency_mhz: 1\n" + GOOD, "line 2: states carrier_frequency again, otherwise than line 1"),
+    "acquired_word.csv": ("# acquired_points: abc\n" + GOOD, "acquired_points must be a whole number in [1, 4], the points here; got 'abc'"),
+    "acquired.csv": ("# acquired_points: 99999\n" + GOOD, "acquired_points must be a whole number in [1, 4]"),
+    "filter.csv": ("# filter_delay: soon\n" + GOOD, "filter_delay must be a number of points, 0 or more; got 'soon'"),
+    "first.csv": ("# first_point: third\n" + GOOD, "first_point must be full or half"),
+    "json.csv": ("# attributes: {1\n" + GOOD, "line 1: attributes must be JSON, a mapping of names"),
+    "two_members.npz": (npz(**{"data.npy": b"x", "data": b"x"}), "holds two arrays of one name"),
     "starts.csv": ("# time_start_s: 0.5\n" + GOOD, "but time_start_s says"),
     "two_points.npz": (saved(data=REAL[:1], **FACTS), "at least 2 points"),
     "nan.npz": (saved(data=REAL * np.nan, **FACTS), "data must be finite; 4 of 4 values are not"),
@@ -467,3 +476,298 @@ def test_import_loads_no_format_library():
     code = "import fidkit, sys; fidkit.read; print(sorted({'nmrglue', 'zarr', 'h5netcdf', 'h5py', 'dask', 'bokeh'} & set(sys.modules)))"
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert done.stdout.strip() == "[]"
+
+
+# what must not be lost ------------------------------------------------------------------------
+
+HARD_ATTRIBUTES = {
+    "good": True,
+    "off": False,
+    "large": 2**60,
+    "empty": "",
+    "Gain of": -0.5,
+    "precision": "single",
+    "dwell_time": 7,
+    "data": "5",
+    "frequency": 5,
+    "attributes": "{}",
+    "layout_of_coordinates": "x",
+    "title": "a $$ b",
+    "processing": "by hand",
+    "units": "V, peak $$ x\n##END=",
+    "sample": "  x\n##END= y",
+    "coil": "a\u2028b\r",
+    "long_name": "voltage",
+    "notes": "first\nsecond",
+    "history": "zero_fill(factor=2)",
+    "filter_delay": 3,
+    "acquired_points": 17,
+    "infinite": np.inf,
+}
+
+
+def one_record(**attributes: object) -> xr.DataArray:
+    return make_fid()[0, 0].reset_coords(drop=True).assign_attrs(attributes)
+
+
+@pytest.mark.parametrize("suffix", ["nc", "zarr", "npz", "csv", "txt", "dx"])
+def test_every_format_keeps_every_attribute(tmp_path, suffix):
+    for signal in (one_record(**HARD_ATTRIBUTES), plain_record()):
+        for made in (signal, fk.fourier_transform(signal.assign_attrs(history="", filter_delay=0))):
+            wanted = {name: value for name, value in made.attrs.items() if name != "source"}
+            found = dict(fk.read(fk.write(made, tmp_path / f"bench.{suffix}")).attrs)
+            found.pop("source", None)
+            assert found == wanted
+            assert {k: type(v) for k, v in found.items()} == {k: type(v) for k, v in wanted.items()}
+
+
+def plain_record() -> xr.DataArray:
+    return fk.from_array(REAL + 1j, dwell_time=1e-3, carrier_frequency=CARRIER)
+
+
+@pytest.mark.parametrize(
+    ("name", "value", "says"),
+    [
+        ("bad", [1, 2], "attribute bad must be text or a number to be written; got [1, 2]"),
+        ("bad", np.arange(2), "attribute bad must be text or a number"),
+        ("bad", b"x", "attribute bad must be text or a number"),
+        ("bad", None, "attribute bad must be text or a number"),
+        ("bad", 1j, "attribute bad must be text or a number"),
+        ("bad", 2**70, "attribute bad must fit into 64 bits; got 1180591620717411303424"),
+        ("bad", "a\0b", "attribute bad must be text without NUL"),
+        ("bad", "\ud800", "attribute bad must be text without NUL and without halves"),
+        ("a\0b", 1, "attribute names must be letters, digits, blanks"),
+        ("", 1, "attribute names must be letters"),
+        ("_NCProperties", 1, "attribute names must be letters"),
+        ("a/b", 1, "attribute names must be letters"),
+        (5, 1, "attribute names must be letters"),
+        ("CLASS", 1, "attribute CLASS: files keep this name for themselves; rename it"),
+        ("acquired_points", 41, "acquired_points must be a whole number in [1, 40]"),
+        ("filter_delay", -1, "filter_delay must be a number of points, 0 or more; got -1"),
+        ("filter_delay", 10**400, "filter_delay must be a number of points"),
+        ("time_start", 1.0, "time_start is for spectra"),
+        ("carrier_frequency", None, "carrier_frequency"),
+        ("nucleus", "27Al", "nucleus must be one of"),
+    ],
+)  # fmt: skip
+def test_what_no_file_can_keep_is_refused_alike(tmp_path, name, value, says):
+    signal = one_record()
+    signal.attrs = signal.attrs | {name: value}
+    for suffix in ("nc", "zarr", "npz", "csv", "dx"):
+        with pytest.raises(FidkitError, match=rf"^bench\.{suffix}: .*{re.escape(says)}"):
+            fk.write(signal, tmp_path / f"bench.{suffix}")
+    if name in ("carrier_frequency", "nucleus"):
+        del signal.attrs[name]
+        for suffix in ("nc", "zarr", "npz", "csv", "dx"):
+            with pytest.raises(FidkitError, match=name):
+                fk.write(signal, tmp_path / f"bench.{suffix}")
+    assert not list(tmp_path.iterdir())
+
+
+@pytest.mark.parametrize("suffix", ["nc", "zarr", "npz"])
+def test_coordinates_come_back_or_are_refused(tmp_path, suffix):
+    path = tmp_path / f"bench.{suffix}"
+    fid = fk.from_array(np.ones((2, 4)) * (1 + 1j), dwell_time=1e-3, carrier_frequency=CARRIER)
+    for name in ("signal", "signal_real", "a/b", "", "..", "_x"):
+        with pytest.raises(FidkitError, match="dimension or coordinate"):
+            fk.write(fid.assign_coords({name: ("shot", [1.0, 2.0])}), path)
+    for values in (np.array(["a", None], object), np.array([b"a", b"b"]), ["a\0b", "c"], np.array([1, 2], np.longdouble)):  # fmt: skip
+        with pytest.raises(FidkitError, match="coordinate gain must be"):
+            fk.write(fid.assign_coords(gain=("shot", values)), path)
+    with pytest.raises(FidkitError, match="gain attribute odd must be text or a number"):
+        fk.write(fid.assign_coords(gain=("shot", [1, 2], {"odd": [1]})), path)
+    assert not list(tmp_path.iterdir())
+    big = fid.astype(">c8").assign_coords(
+        {
+            "my gain": ("shot", np.array([1, 2], ">f4")),
+            "who": ("shot", np.array(["a", "b"], object)),
+        }
+    )
+    back = fk.read(fk.write(big, path))
+    assert back.dtype == np.complex64
+    np.testing.assert_array_equal(back.values, fid.values)
+    assert back["my gain"].values.tolist() == [1, 2]
+    assert back["who"].values.tolist() == ["a", "b"]
+
+
+@pytest.mark.parametrize("suffix", ["npz", "csv", "dx"])
+def test_values_that_would_not_be_read_are_not_written(tmp_path, suffix):
+    fid = one_record().copy(deep=True)
+    fid[3] = np.nan
+    with pytest.raises(FidkitError, match="the values must be finite in this format; 1 of 40 are"):
+        fk.write(fid, tmp_path / f"bench.{suffix}")
+    with pytest.raises(FidkitError, match="must be float32, float64, complex64 or complex128"):
+        fk.write(one_record().astype(np.clongdouble), tmp_path / f"bench.{suffix}")
+    assert not list(tmp_path.iterdir())
+
+
+def test_a_missing_block_of_a_zarr_store_is_told(tmp_path):
+    """Zarr itself reads zeros there; a block of zeros that was measured is no missing one."""
+    fid = fk.from_array(np.ones((2, 8)) + 0j, dwell_time=1e-3, carrier_frequency=CARRIER)
+    fid = fid.copy(data=fid.values * [[0], [1]]).assign_coords(shot=[0, 1])
+    for name in ("signal/c/1/0", "shot/c/0"):
+        path = fk.write(fid.chunk({"shot": 1}), tmp_path / "bench.zarr")
+        assert_same(fk.read(path), fid)
+        (path / name).unlink()
+        for chunks in (None, {}):
+            with pytest.raises(FidkitError, match=r"bench\.zarr: 1 of [12] blocks of s\w+ are mis"):
+                fk.read(path, chunks=chunks)
+
+
+@pytest.mark.parametrize("suffix", ["nc", "zarr", "csv", "npz", "dx"])
+def test_no_folder_but_a_store_of_our_own_is_replaced(tmp_path, suffix):
+    path = tmp_path / f"work.{suffix}"
+    path.mkdir()
+    (path / "thesis.txt").write_text("x")
+    with pytest.raises(FidkitError, match=rf"work\.{suffix}: .*folder"):
+        fk.write(one_record(), path)
+    assert (path / "thesis.txt").read_text() == "x"
+    if suffix == "zarr":
+        store = fk.write(one_record(), tmp_path / "bench.zarr")
+        (store / "thesis.txt").write_text("x")
+        with pytest.raises(FidkitError, match="no Zarr store written by fidkit"):
+            fk.write(one_record(), store)
+        (tmp_path / "file.zarr").write_text("x")
+        with pytest.raises(FidkitError, match="it is a file, and a folder is to be written"):
+            fk.write(one_record(), tmp_path / "file.zarr")
+
+
+@pytest.mark.parametrize("suffix", ["nc", "csv"])
+def test_permissions_and_links_stay(tmp_path, suffix):
+    """A new file follows the umask, one that is there keeps its mode, a link stays a link."""
+    path = tmp_path / f"bench.{suffix}"
+    before = os.umask(0o027)
+    try:
+        fk.write(one_record(), path)
+        assert path.stat().st_mode & 0o777 == 0o640
+        path.chmod(0o600)
+        link = tmp_path / f"link.{suffix}"
+        link.symlink_to(path)
+        assert fk.write(one_record(sample="new"), link) == link
+    finally:
+        os.umask(before)
+    assert link.is_symlink()
+    assert path.stat().st_mode & 0o777 == 0o600
+    assert fk.read(path).attrs["sample"] == "new"
+    os.mkfifo(tmp_path / f"pipe.{suffix}")
+    with pytest.raises(FidkitError, match="neither a file nor a folder"):
+        fk.write(one_record(), tmp_path / f"pipe.{suffix}")
+    assert len(list(tmp_path.iterdir())) == 3
+
+
+def test_a_pipe_is_not_waited_for(tmp_path):
+    os.mkfifo(tmp_path / "pipe.csv")
+    for path in (tmp_path / "pipe.csv", "/dev/zero"):
+        with pytest.raises(FidkitError, match="is neither a file nor a folder"):
+            fk.read(path)
+
+
+@pytest.mark.parametrize("path", [None, 5, "a\0b", "", b"x.csv"])
+def test_a_path_that_is_none(path):
+    for use in (fk.read, lambda path: fk.write(one_record(), path)):
+        with pytest.raises(FidkitError, match="path must be text or a path"):
+            use(path)
+
+
+@pytest.mark.parametrize(
+    ("arguments", "says"),
+    [
+        ({"block": "a"}, "block must be a whole number from 1; got 'a'"),
+        ({"block": 1.0}, "block must be a whole number from 1; got 1.0"),
+        ({"time_start": np.zeros(2)}, "time_start must be a number; got array"),
+        ({"dwell_time": "1e-3"}, "dwell_time must be a number; got '1e-3'"),
+        ({"carrier_frequency": True}, "carrier_frequency must be a number; got True"),
+        ({"nucleus": 1}, "nucleus must be text; got 1"),
+        ({"sample": 5}, "sample must be text"),
+        ({"dims": 5}, "dims must be names of dimensions; got 5"),
+        ({"dims": (None,)}, "dims must be names of dimensions"),
+    ],
+)
+def test_arguments_of_the_wrong_kind(read, arguments, says):
+    with pytest.raises(FidkitError, match=rf"^bench\.csv: {re.escape(says)}"):
+        read(GOOD, **arguments)
+
+
+@pytest.mark.parametrize("chunks", ["abc", {"shot": "x"}, {"nowhere": 1}])
+def test_chunks_of_the_wrong_kind(tmp_path, chunks):
+    path = fk.write(make_fid(), tmp_path / "bench.zarr")
+    with pytest.raises(FidkitError, match=r"bench\.zarr: chunks must be \{\}, 'auto', a number"):
+        fk.read(path, chunks=chunks)
+
+
+@pytest.mark.parametrize(("suffix", "library"), [("nc", "h5netcdf"), ("nc", "h5py"), ("zarr", "zarr"), ("zarr", "dask")])  # fmt: skip
+def test_a_missing_library_is_named(tmp_path, monkeypatch, suffix, library):
+    path = fk.write(make_fid(), tmp_path / f"bench.{suffix}")
+    monkeypatch.setitem(sys.modules, library, None)
+    chunks = {} if library == "dask" else None
+    with pytest.raises(FidkitError, match=rf"needs the library {library}, .*install {library}$"):
+        fk.read(path, chunks=chunks)
+    if library != "dask":
+        with pytest.raises(FidkitError, match=rf"needs the library {library}"):
+            fk.write(make_fid(), path)
+
+
+def test_parts_of_different_length(tmp_path):
+    for data in ([REAL, IMAGINARY[:3]], [[1, 2], [3]]):
+        with pytest.raises(FidkitError, match="the parts of the array must be of one length"):
+            fk.from_universal(universal(sw=2000.0, obs=63.87), data)
+
+
+def test_facts_of_other_names_are_attributes(read, tmp_path):
+    fid = read("# data: 5\n# frequency: 6\n# dims: 7\n# coords: x\n" + GOOD)
+    assert [fid.attrs[name] for name in ("data", "frequency", "dims", "coords")] == [5, 6, 7, "x"]
+    text = '{"data": 1, "dwell_time": 3, "list": [1], "sample": "water"}'
+    fid = read(saved(data=REAL, attributes=text, **FACTS), "bench.npz")
+    assert (fid.attrs["data"], fid.attrs["dwell_time"], fid.attrs["sample"]) == (1, 3, "water")
+    assert "attribute list ([1]) is neither text nor a number and left out" in fid.attrs["notes"]
+
+
+def test_an_empty_nucleus_is_a_missing_one(read):
+    fid = read(GOOD.replace("13C", ""))
+    assert fid.attrs["nucleus"] == "1H"
+    assert "the nucleus is not in the file; taken as 1H" in fid.attrs["notes"]
+
+
+def test_values_in_notes_are_short(read):
+    assert "dwell_time 0.0001 was given; the file says 0.001" in read(
+        GOOD, dwell_time=9.999999999999999e-05
+    ).attrs["notes"]  # fmt: skip
+
+
+@pytest.mark.parametrize(
+    "text",
+    [
+        table("# time_s,real,imag", TIME, REAL, IMAGINARY),
+        table("# time_s,real,imag", TIME, REAL, IMAGINARY, mark=" "),
+        table('"time_s","real","imag"', *([f'"{x}"' for x in c] for c in (TIME, REAL, IMAGINARY))),
+        table("time_\N{GREEK SMALL LETTER MU}s,real,imag", [1000, 2000, 3000, 4000], REAL, IMAGINARY),
+        table("time_\N{MICRO SIGN}s,real,imag", [1000, 2000, 3000, 4000], REAL, IMAGINARY),
+        table("time_s,real,imag", TIME, REAL, IMAGINARY).replace("\n", "\r"),
+    ],
+)  # fmt: skip
+def test_tables_as_other_programs_write_them(read, text):
+    for name in ("bench.csv", "bench.unknown"):
+        fid = read(text, name)
+        np.testing.assert_array_equal(fid.values, REAL + 1j * IMAGINARY)
+        np.testing.assert_allclose(fid.time.values, TIME, rtol=1e-14)  # rounding of a double
+
+
+def test_a_table_as_numpy_writes_it(tmp_path):
+    path = tmp_path / "bench.txt"
+    np.savetxt(path, np.column_stack([TIME, REAL, IMAGINARY]), header="time_s,real,imag")
+    fid = fk.read(path, carrier_frequency=CARRIER)
+    np.testing.assert_array_equal(fid.values, REAL + 1j * IMAGINARY)
+
+
+def test_a_key_that_stands_twice(read):
+    fid = read("# gain: 1\n# gain: 2\n# nucleus: 13C\n" + GOOD)
+    assert fid.attrs["gain"] == 1
+    assert "line 1 says what gain is; line 2 does not count" in fid.attrs["notes"]
+    assert "nucleus is" not in fid.attrs["notes"]
+
+
+def test_a_missing_coordinate_is_named(tmp_path):
+    path = fk.write(make_fid(), tmp_path / "bench.zarr")
+    (path / "turns" / "zarr.json").unlink()
+    with pytest.raises(FidkitError, match=r"^bench\.zarr: holds no turns; fidkit reads"):
+        fk.read(path)

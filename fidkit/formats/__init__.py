@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import math
 import os
 from collections.abc import Callable, Mapping, Sequence
+from numbers import Integral, Real
 from pathlib import Path
 from typing import Any
 
@@ -11,8 +13,9 @@ import numpy as np
 import xarray as xr
 
 from fidkit import signals
-from fidkit.formats.record import Record
-from fidkit.params import FidkitError
+from fidkit.formats.record import FIELDS, Record, check_facts, writable
+from fidkit.nuclei import find_nucleus
+from fidkit.params import FidkitError, shown
 
 __all__ = ["from_universal", "read", "write"]
 
@@ -73,19 +76,20 @@ def read(
         If the file cannot be read, is damaged, or lacks something; it says what, and begins with
         the name of the file.
     """
-    path = Path(path)
-    given: dict[str, Any] = {
-        "dwell_time": dwell_time,
-        "carrier_frequency": carrier_frequency,
-        "nucleus": nucleus,
-        "time_start": time_start,
-        "units": units,
-        "sample": sample,
-        "coil": coil,
-        "dims": None if dims is None else (dims,) if isinstance(dims, str) else tuple(dims),
-    }
-    given = {name: value for name, value in given.items() if value is not None}
+    path = _path(path)
     try:
+        given = _given(
+            dwell_time=dwell_time,
+            carrier_frequency=carrier_frequency,
+            nucleus=nucleus,
+            time_start=time_start,
+            units=units,
+            sample=sample,
+            coil=coil,
+            dims=dims,
+        )
+        if block is not None and (not isinstance(block, Integral) or isinstance(block, bool)):
+            raise FidkitError(f"block must be a whole number from 1; got {shown(block)}")
         kind = _kind(path)
         for name, value, wanted in (("block", block, "JCAMP-DX"), ("chunks", chunks, "Zarr")):
             if value is not None and kind != wanted:
@@ -117,8 +121,9 @@ def write(signal: xr.DataArray, path: str | os.PathLike[str]) -> Path:
     path : path-like
         ``.nc`` and ``.zarr`` keep everything to the last bit; ``.npz`` keeps everything with which
         `fidkit.from_array` makes a signal; ``.csv`` and ``.txt`` hold one record in full precision;
-        ``.dx`` and ``.jdx`` one record, rounded to 31 bits, with the usual facts only. Tables and
-        JCAMP-DX keep no coordinates beside the axis. What is there already is replaced.
+        ``.dx`` and ``.jdx`` one record, rounded to 31 bits. Tables and JCAMP-DX keep no coordinates
+        beside the axis. A file that is there already is replaced; a folder only if it is a Zarr
+        store that fidkit wrote.
 
     Returns
     -------
@@ -129,11 +134,18 @@ def write(signal: xr.DataArray, path: str | os.PathLike[str]) -> Path:
     ------
     FidkitError
         If the suffix is not known or the format cannot hold this signal.
+
+    Notes
+    -----
+    Every format keeps all attributes: text, numbers, whole numbers of 64 bits and switches, under
+    names of letters, digits, blanks and ``_ . -``. Anything else is refused. Only ``source`` becomes
+    the name of the file that is read, except in ``.nc`` and ``.zarr``, which alone keep numpy's own
+    types of numbers.
     """
-    path = Path(path)
-    signals.is_fid(signal)
+    path = _path(path)
     suffix = path.suffix.lower()
     try:
+        signal = writable(signal)
         if suffix in (".nc", ".zarr"):
             from fidkit.formats import archive
 
@@ -199,17 +211,44 @@ def from_universal(
     """
     from fidkit.formats import universal_dictionary
 
-    given: dict[str, Any] = {
-        "carrier_frequency": carrier_frequency,
-        "dwell_time": dwell_time,
-        "nucleus": nucleus,
-        "dims": dims,
-    }
-    given = {name: value for name, value in given.items() if value is not None}
     try:
+        given = _given(
+            carrier_frequency=carrier_frequency, dwell_time=dwell_time, nucleus=nucleus, dims=dims
+        )
         return _assemble(universal_dictionary.read(universal, data), given, "")
     except FidkitError as error:
         raise type(error)(f"universal dictionary: {error}") from error
+
+
+def _path(path: Any) -> Path:
+    text = (
+        path if isinstance(path, str) else os.fspath(path) if hasattr(path, "__fspath__") else None
+    )
+    if not isinstance(text, str) or not text or "\0" in text:
+        raise FidkitError(
+            f"path must be text or a path, not empty and without NUL; got {shown(path)}"
+        )
+    return Path(text)
+
+
+def _given(**arguments: Any) -> dict[str, Any]:
+    """Those arguments that were given, each of its kind."""
+    given = {name: value for name, value in arguments.items() if value is not None}
+    for name, value in given.items():
+        if name in ("dwell_time", "carrier_frequency", "time_start"):
+            fits, kind = isinstance(value, Real) and not isinstance(value, bool), "a number"
+        elif name == "dims":
+            value = (value,) if isinstance(value, str) else value
+            fits = isinstance(value, Sequence) and all(isinstance(part, str) for part in value)
+            given[name] = tuple(value) if fits else value
+            kind = "names of dimensions"
+        else:
+            fits, kind = isinstance(value, str), "text"
+        if not fits:
+            raise FidkitError(f"{name} must be {kind}; got {shown(value)}")
+    if "nucleus" in given:
+        given["nucleus"] = find_nucleus(given["nucleus"]).name
+    return given
 
 
 def _kind(path: Path) -> str:
@@ -217,6 +256,8 @@ def _kind(path: Path) -> str:
         if (path / "zarr.json").is_file():
             return "Zarr"
         raise FidkitError(f"is a folder, and no Zarr store (format 3); {KNOWN}")
+    if path.exists() and not path.is_file():  # reading from a pipe or a device may never end
+        raise FidkitError("is neither a file nor a folder; copy the record into a file first")
     with path.open("rb") as file:
         head = file.read(65536)
     if not head.strip():
@@ -260,10 +301,10 @@ def _assemble(
     notes = list(record.notes)
     for name, value in given.items():
         stated = getattr(record, name)
-        if stated is not None and stated != value:
-            notes.append(f"{name} {value!r} was given; the file says {stated!r}")
+        if stated is not None and not _same(stated, value):
+            notes.append(f"{name} {_text(value)} was given; the file says {_text(stated)}")
         elif name != "dims":
-            notes.append(f"{name} {value!r} was given")
+            notes.append(f"{name} {_text(value)} was given")
         setattr(record, name, value)
     is_fid = record.frequency is None
     if record.carrier_frequency is None:
@@ -272,22 +313,26 @@ def _assemble(
         raise FidkitError("dwell_time is not in the file; pass dwell_time=<s>")
     if not is_fid and {"dwell_time", "time_start"} & given.keys():
         raise FidkitError("holds a spectrum, which has no dwell_time or time_start to give")
-    if record.nucleus is None:
+    if not record.nucleus:
         notes.append("the nucleus is not in the file; taken as 1H")
     if is_fid and record.time_start is None:
         notes.append("the time of the first point is not in the file; taken as 0 s after the pulse")
+    try:
+        nucleus = find_nucleus(record.nucleus or "1H").name
+    except FidkitError as error:
+        raise FidkitError(
+            f"{error} in the file; pass nucleus=<name> to read it as another one"
+        ) from None
     shared: dict[str, Any] = {
         "carrier_frequency": record.carrier_frequency,
-        "nucleus": record.nucleus or "1H",
-        "units": record.units or "1",
+        "nucleus": nucleus,
+        "units": "1" if record.units is None else record.units,
         "sample": record.sample or "",
         "coil": record.coil or "",
         "source": source,
         "dims": record.dims,
         "coords": record.coords,
     }
-    reserved = {"history", "notes", "source", "long_name", *signals.SIGNAL_ATTRIBUTES, *shared}
-    more = {name: value for name, value in record.more.items() if name not in reserved}
     try:
         if is_fid:
             signal = signals.from_array(
@@ -295,25 +340,41 @@ def _assemble(
                 dwell_time=record.dwell_time,  # type: ignore[arg-type]
                 time_start=record.time_start or 0.0,
                 **shared,
-                **more,
             )
         else:
             frequency = np.asarray(record.frequency, dtype=float)
             if record.frequency_in_ppm:
                 frequency = frequency * float(record.carrier_frequency) * 1e-6
-            signal = signals.spectrum_from_array(
-                record.values, frequency=frequency, **shared, **more
-            )
+            signal = signals.spectrum_from_array(record.values, frequency=frequency, **shared)
     except FidkitError:
         raise
     except ValueError as error:  # of xarray, where a coordinate does not fit
         raise FidkitError(f"the coordinates do not fit the values: {error}") from error
-    for name in ("history", "notes", *signals.SIGNAL_ATTRIBUTES):
-        if name in record.more:
-            signal.attrs[name] = record.more[name]
+    made = signal.attrs.pop("notes", "")
+    signal.attrs |= {
+        name: str(value) if name in ("history", "notes") else value
+        for name, value in record.more.items()
+        if name not in (*FIELDS, "source")
+    }
+    check_facts(signal.attrs, signal.shape[-1])
+    if made and made not in signal.attrs.get("notes", ""):
+        notes.append(made)
     if before is not None:
         signal.name = before.name
+        along = {name: item for name, item in before.coords.items() if name not in signal.coords}
+        signal = signal.assign_coords({name: item.variable for name, item in along.items()})
         signal.attrs["source"] = before.attrs.get("source", source)
     for note in notes:
         signals.add_note(signal, note)
     return signal
+
+
+def _same(one: Any, other: Any) -> bool:
+    """Equal, numbers to the rounding of a double."""
+    if isinstance(one, Real) and isinstance(other, Real):
+        return math.isclose(one, other, rel_tol=1e-12)
+    return bool(one == other)
+
+
+def _text(value: Any) -> str:
+    return f"{value:.10g}" if isinstance(value, Real) else repr(value)

@@ -8,8 +8,10 @@ cannot say (types of text, times and switches, what belongs to which) stands in 
 
 from __future__ import annotations
 
+import importlib
 import json
 import warnings
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
@@ -17,8 +19,9 @@ import numpy as np
 import xarray as xr
 
 from fidkit import signals
-from fidkit.formats.record import Record, exact_spacing, replacing
-from fidkit.params import FidkitError
+from fidkit.files import replacing
+from fidkit.formats.record import Record, exact_spacing, plain_value
+from fidkit.params import FidkitError, shown
 
 __all__ = ["as_record", "read", "write"]
 
@@ -42,14 +45,22 @@ def write(signal: xr.DataArray, path: Path, kind: str) -> None:
     Raises
     ------
     FidkitError
-        If a coordinate or attribute is of no kind that the format can hold.
+        If a coordinate is of no kind that the format can hold, or `path` is a folder that is no
+        store of fidkit's own.
     """
+    _need(kind)
+    if path.is_dir() and not (kind == "Zarr" and _is_own_store(path)):
+        raise FidkitError(
+            "is a folder that is no Zarr store written by fidkit, and is left as it is; give another name"
+        )
     if signal.chunks is not None:  # Zarr holds blocks of one shape only
         signal = signal.chunk(dict(zip(signal.dims, map(max, signal.chunks), strict=True)))
     dataset = _packed(signal, split=kind == "netCDF")
-    with replacing(path) as target, warnings.catch_warnings():
+    with replacing(path, folder=kind == "Zarr") as target, warnings.catch_warnings():
         # the way Zarr stores text is still to be put into its specification; it reads back
         warnings.filterwarnings("ignore", message=".*Zarr V3 specification.*")
+        # which variables are coordinates stands in the layout
+        warnings.filterwarnings("ignore", message="coordinate .* has a space in its name")
         # check sums, so that damage is seen when the file is read
         sums: dict[str, Any] = {"fletcher32": True}
         if kind == "Zarr":
@@ -64,7 +75,10 @@ def write(signal: xr.DataArray, path: Path, kind: str) -> None:
         if kind == "netCDF":
             dataset.to_netcdf(target, engine="h5netcdf", format="NETCDF4", encoding=told)
         else:
-            dataset.to_zarr(target, zarr_format=3, consolidated=False, encoding=told)
+            # blocks of nothing but zeros are written too, so that a lost one can be told
+            dataset.to_zarr(
+                target, zarr_format=3, consolidated=False, encoding=told, write_empty_chunks=True
+            )
 
 
 def read(path: Path, kind: str, chunks: Any = None) -> xr.DataArray:
@@ -89,9 +103,13 @@ def read(path: Path, kind: str, chunks: Any = None) -> xr.DataArray:
     FidkitError
         If the file was not written by fidkit or is damaged.
     """
+    _need(kind)
+    if chunks is not None:
+        _need("chunks")
     try:
         with warnings.catch_warnings():
             warnings.filterwarnings("ignore", message=".*Zarr V3 specification.*")
+            warnings.filterwarnings("ignore", message=".*not recognized as a component of a Zarr")
             if kind == "netCDF":
                 import h5py
 
@@ -101,11 +119,7 @@ def read(path: Path, kind: str, chunks: Any = None) -> xr.DataArray:
                 with xr.open_dataset(path, engine="h5netcdf", decode_cf=False) as opened:
                     dataset = opened.load()
             else:
-                dataset = xr.open_dataset(
-                    path, engine="zarr", decode_cf=False, consolidated=False, zarr_format=3, chunks=chunks
-                )  # fmt: skip
-                if chunks is None:
-                    dataset = dataset.load()
+                dataset = _open_store(path, chunks)
         layout = json.loads(dataset.attrs[LAYOUT])
         signal = _unpacked(dataset, layout)
     except (MemoryError, FidkitError):
@@ -122,6 +136,64 @@ def read(path: Path, kind: str, chunks: Any = None) -> xr.DataArray:
     return signal
 
 
+def _open_store(path: Path, chunks: Any) -> xr.Dataset:
+    import zarr
+
+    for name, array in zarr.open_group(
+        path, mode="r", zarr_format=3, use_consolidated=False
+    ).arrays():
+        missing = array.nchunks - array.nchunks_initialized
+        if missing:  # Zarr itself would fill them with zeros
+            raise FidkitError(
+                f"{missing} of {array.nchunks} blocks of {name} are missing; the store is damaged or "
+                "was not copied whole"
+            )
+
+    def opened(chunks: Any) -> xr.Dataset:
+        return xr.open_dataset(
+            path, engine="zarr", decode_cf=False, consolidated=False, zarr_format=3, chunks=chunks
+        )
+
+    dataset = opened(None)
+    if chunks is None:
+        return dataset.load()
+    try:
+        if isinstance(chunks, Mapping) and not chunks.keys() <= set(dataset.dims):
+            raise ValueError(f"the dimensions are {', '.join(map(str, dataset.dims))}")
+        return opened(chunks)
+    except Exception as error:
+        reason = " ".join(str(error).split())[:160]
+        raise FidkitError(
+            "chunks must be {}, 'auto', a number of points or such numbers by dimension; "
+            f"got {shown(chunks)}: {reason}"
+        ) from error
+
+
+#: Libraries by what they are needed for.
+LIBRARIES = {"netCDF": ("h5py", "h5netcdf"), "Zarr": ("zarr",), "chunks": ("dask",)}
+
+
+def _need(what: str) -> None:
+    for name in LIBRARIES[what]:
+        try:
+            importlib.import_module(name)
+        except ImportError as error:
+            raise FidkitError(
+                f"{what} needs the library {name}, which cannot be loaded ({error}); install {name}"
+            ) from error
+
+
+def _is_own_store(path: Path) -> bool:
+    """Whether a folder holds what `write` puts there, and nothing else."""
+    try:
+        attributes = json.loads((path / "zarr.json").read_bytes()).get("attributes", {})
+    except (OSError, ValueError, AttributeError):
+        return False
+    return LAYOUT in attributes and all(
+        entry.name == "zarr.json" or (entry / "zarr.json").is_file() for entry in path.iterdir()
+    )
+
+
 def as_record(signal: xr.DataArray) -> Record:
     """Take a signal apart again, so that the caller's words can win over the file's."""
     axis = np.asarray(signal[signal.dims[-1]].values, dtype=float)
@@ -133,7 +205,12 @@ def as_record(signal: xr.DataArray) -> Record:
     record = Record(
         signal.values,
         dims=tuple(str(name) for name in signal.dims),
-        coords=dict(signal.coords),  # type: ignore[arg-type]
+        # those along the axis are as they were, or follow from the caller's words
+        coords={
+            str(name): coordinate
+            for name, coordinate in signal.coords.items()
+            if signal.dims[-1] not in coordinate.dims
+        },
         more=more,
         **facts,
     )
@@ -164,10 +241,6 @@ def _packed(signal: xr.DataArray, *, split: bool) -> xr.Dataset:
             values = values.astype(np.int8)
         elif values.dtype.kind == "U":
             values = values.astype(object)
-        elif values.dtype.kind not in "iuf":
-            raise FidkitError(
-                f"coordinate {name} must be numbers, text or times; got {values.dtype}"
-            )
         coordinates[str(name)] = xr.Variable(
             coordinate.dims, values, _attributes(attributes), {"_FillValue": None}
         )
@@ -206,6 +279,8 @@ def _unpacked(dataset: xr.Dataset, layout: dict[str, Any]) -> xr.DataArray:
         raise FidkitError(f"the signal must be {wanted}; got {data.dtype}; the file is damaged")
     coordinates = {}
     for name, kind in layout["coordinates"].items():
+        if name not in dataset.variables:
+            raise KeyError(name)
         stored = dataset[name].variable
         coordinate_type = np.dtype(kind)
         if coordinate_type.kind not in "iufbUmM":
@@ -240,14 +315,10 @@ def _attributes(attributes: Any) -> dict[str, Any]:
     for key, value in attributes.items():
         if isinstance(value, bool | np.bool_):
             kept[str(key)] = int(value)
-        elif isinstance(value, np.generic) and np.dtype(value.dtype).kind in "iuf":
-            kept[str(key)] = value.item()
-        elif isinstance(value, str | int | float):
-            kept[str(key)] = str(value) if isinstance(value, str) else value
+        elif isinstance(value, str):
+            kept[str(key)] = str(value)
         else:
-            raise FidkitError(
-                f"attribute {key} must be text or a number to be written; got {type(value).__name__}"
-            )
+            kept[str(key)] = plain_value(value)
     return kept
 
 
@@ -256,7 +327,7 @@ def _restored(attributes: Any) -> dict[str, Any]:
 
 
 def _restored_value(value: Any, kind: str) -> Any:
-    plain = value.item() if isinstance(value, np.generic) else value
+    plain = plain_value(value)
     if kind == "plain":
         return plain
     return bool(plain) if kind == "switch" else np.dtype(kind).type(plain)

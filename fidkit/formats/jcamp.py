@@ -9,6 +9,8 @@ value), and all of them are kept: a file that fails one is refused, with the lin
 
 from __future__ import annotations
 
+import contextlib
+import json
 import math
 import re
 from dataclasses import dataclass, field
@@ -23,16 +25,23 @@ import xarray as xr
 from fidkit import signals
 from fidkit.files import write_whole
 from fidkit.formats import asdf
-from fidkit.formats.record import Record, exact_spacing, printed_unit, real_number, text_of
+from fidkit.formats.record import (
+    FREQUENCY_UNITS,
+    TIME_UNITS,
+    Record,
+    exact_spacing,
+    further_attributes,
+    mapping,
+    printed_unit,
+    real_number,
+    require_finite,
+    text_of,
+)
 from fidkit.params import FidkitError
 
 __all__ = ["looks_like", "read", "write"]
 
-TIME = {"SECONDS": 1.0, "SECOND": 1.0, "SEC": 1.0, "S": 1.0, "MILLISECONDS": 1e-3, "MSEC": 1e-3, "MS": 1e-3, "MICROSECONDS": 1e-6, "USEC": 1e-6, "US": 1e-6, "NANOSECONDS": 1e-9, "NS": 1e-9}  # fmt: skip
-FREQUENCY = {"HZ": 1.0, "HERTZ": 1.0, "KHZ": 1e3, "MHZ": 1e6}
-SHIFT = ("PPM",)
-
-#: Attributes by label, the first one found; ``$`` labels are those that `write` adds.
+#: Attributes by label, the first one found.
 TEXTS = {
     "sample": ("SAMPLEDESCRIPTION", "NAMES"),
     "coil": ("$COIL",),
@@ -48,6 +57,8 @@ TEXTS = {
 #: What `write` adds, since no label of the standard says it: with it nothing need be assumed.
 SIGN_LABEL = "$FREQUENCY SIGN"
 SIGN_TEXT = "COUNTED FROM THE CARRIER, POSITIVE IS FASTER"
+#: Attributes that the labels cannot say, as JSON.
+FURTHER_LABEL = "$ATTRIBUTES"
 
 
 @dataclass
@@ -106,6 +117,8 @@ class Column:
     def rounding(self, what: str) -> float:
         """One unit in the last printed place of a position on the axis, or of a factor."""
         text = self.stated[what][0]
+        if float(text) == 0:  # where counting begins, however it is printed
+            return 0.0
         if re.fullmatch(r"[+-]?\d+", text):  # printed short: zeros of the fraction were dropped
             return abs(float(text)) * 1e-6
         return printed_unit(text)
@@ -155,6 +168,7 @@ def read(path: Path, *, block: int | None = None) -> Record:
         If the file holds no such data, or fails one of the format's checks.
     """
     chosen, notes = _choose(_blocks(text_of(path.read_bytes())), block)
+    notes += _repeated(chosen)
     x, pages = _ntuples(chosen) if chosen.find("NTUPLES") else _xydata(chosen)
     is_fid = _is_fid(chosen, x, notes)
     parts = {
@@ -172,7 +186,7 @@ def read(path: Path, *, block: int | None = None) -> Record:
     record = Record(parts["R"], notes=notes)
     _facts(chosen, record)
     if is_fid:
-        _fid(chosen, record, parts, first, step, TIME[x.unit])
+        _fid(chosen, record, parts, first, step, TIME_UNITS[x.unit.lower()])
     else:
         if "I" in parts:
             record.values = parts["R"] + 1j * parts["I"]
@@ -183,8 +197,8 @@ def read(path: Path, *, block: int | None = None) -> Record:
         if first is None or step is None:
             raise FidkitError("the X axis is not stated; FIRST and LAST (or FIRSTX, LASTX) must be")
         axis = np.asarray(first + step * np.arange(points), dtype=np.float64)
-        record.frequency = axis * FREQUENCY.get(x.unit, 1.0)
-        record.frequency_in_ppm = x.unit in SHIFT
+        record.frequency = axis * FREQUENCY_UNITS.get(x.unit.lower(), 1.0)
+        record.frequency_in_ppm = x.unit == "PPM"
         if not chosen.states_sign:
             notes.append(
                 f"the {x.unit} axis is counted from the reference of the file, not from the carrier"
@@ -242,18 +256,12 @@ def _fid(
                 "the sense of rotation is not stated in a JCAMP-DX file and is taken as it stands; "
                 "reverse_frequency turns it round"
             )
-    for entry in block.entries:
-        if entry.label.startswith("$") and re.search("GROUPDELAY|GRPDLY", entry.label):
-            try:
-                delay = real_number(entry.text, entry.label)
-            except FidkitError:
-                continue
-            if delay > 0:
-                record.more["filter_delay"] = delay
-                notes.append(
-                    f"the file states a digital-filter delay of {delay:g} points, which is still in "
-                    "the record; remove_filter_delay takes it out"
-                )
+    delay = record.more.get("filter_delay", 0)
+    if delay and not block.states_sign:
+        notes.append(
+            f"the file states a digital-filter delay of {delay:g} points, which is still in the "
+            "record; remove_filter_delay takes it out"
+        )
 
 
 def _earlier(values: npt.NDArray[np.float64], lag: float) -> npt.NDArray[np.float64]:
@@ -287,16 +295,29 @@ def _blocks(text: str) -> list[Block]:
             )
         if label == "END":
             stack.pop().ended = True
-            entry = None
-            if not stack:
-                # further top-level blocks may follow; anything but a title is refused above
-                continue
+            entry = None  # further blocks may follow; anything but a title is refused above
             continue
         entry = Entry(label, number, value.strip())
         stack[-1].entries.append(entry)
     if not blocks:
         raise FidkitError("a JCAMP-DX file begins with ##TITLE=; this one has no such label")
     return blocks
+
+
+def _repeated(block: Block) -> list[str]:
+    """A note for every label that stands twice and says different things."""
+    first: dict[str, Entry] = {}
+    notes = []
+    for entry in block.entries:
+        before = first.setdefault(entry.label, entry)
+        # pages and comments are meant to repeat, private labels are not read
+        if before.text != entry.text and not re.match(
+            r"\$|PAGE|DATATABLE|END|COMMENT|$", entry.label
+        ):
+            notes.append(
+                f"line {before.line} says what {entry.label} is; line {entry.line} does not count"
+            )
+    return notes
 
 
 def _choose(blocks: list[Block], number: int | None) -> tuple[Block, list[str]]:
@@ -330,13 +351,12 @@ def _choose(blocks: list[Block], number: int | None) -> tuple[Block, list[str]]:
 
 
 def _is_fid(block: Block, x: Column, notes: list[str]) -> bool:
-    known = x.unit in TIME or x.unit in FREQUENCY or x.unit in SHIFT
-    if not known:
+    in_time = x.unit.lower() in TIME_UNITS
+    if not in_time and x.unit.lower() not in FREQUENCY_UNITS and x.unit != "PPM":
         raise FidkitError(
             "the unit of X must be SECONDS (or MILLISECONDS, MICROSECONDS) for an FID, HZ or PPM for a "
             f"spectrum; got {x.unit or 'none'!r}"
         )
-    in_time = x.unit in TIME
     if not block.kind:
         notes.append(
             f"DATA TYPE is not stated; with X in {x.unit} taken as {'an FID' if in_time else 'a spectrum'}"
@@ -586,6 +606,9 @@ def _facts(block: Block, record: Record) -> None:
         text = block.text(*labels)
         if text:
             record.more[name] = text
+    if block.states_sign:  # of `write`, which has to fill these in
+        for name in ("title", "processing"):
+            record.more.pop(name, None)
     record.sample = record.more.pop("sample", None) or record.more.get("title")
     record.coil = record.more.pop("coil", None)
     date = block.text("LONGDATE") or " ".join(
@@ -596,6 +619,19 @@ def _facts(block: Block, record: Record) -> None:
     averages = block.text(".AVERAGES")
     if averages.isdecimal() and len(averages) < 12:
         record.more["averages"] = int(averages)
+    group_delay = block.text("$GROUPDELAY")
+    if group_delay and "FID" in block.kind:
+        with contextlib.suppress(FidkitError):  # a private label may mean anything
+            delay = real_number(group_delay, "$GROUP DELAY")
+            if delay > 0:
+                record.more["filter_delay"] = delay
+    further = block.find(FURTHER_LABEL)
+    if further:
+        found = mapping(further.text, f"line {further.line}: {FURTHER_LABEL}")
+        for name in ("units", "sample", "coil"):
+            if isinstance(found.get(name), str):
+                setattr(record, name, found.pop(name))
+        record.keep(found)
 
 
 #: Largest whole number that `write` scales to: 31 bits and a sign.
@@ -615,7 +651,7 @@ def write(signal: xr.DataArray, path: Path) -> None:
     Raises
     ------
     FidkitError
-        For more than one record.
+        For more than one record, or values that are not finite.
     """
     if signal.ndim != 1:
         raise FidkitError(
@@ -624,6 +660,7 @@ def write(signal: xr.DataArray, path: Path) -> None:
         )
     is_fid = signals.is_fid(signal)
     values = np.asarray(signal.values)
+    require_finite(values)
     axis = np.asarray(signal[signal.dims[-1]].values, dtype=float)
     step = exact_spacing(axis)
     first = 0.0 if is_fid else float(axis[0])
@@ -643,7 +680,8 @@ def write(signal: xr.DataArray, path: Path) -> None:
         )
 
     units = signal.attrs.get("units", "1")
-    units = "ARBITRARY UNITS" if units == "1" else units
+    # a comma would begin the next column
+    units = "ARBITRARY UNITS" if units == "1" else _line(units).replace(",", ";")
     names = [f"{kind.removeprefix('NMR ')}/{'REAL' if s == 'R' else 'IMAG'}" for s in pages]
     numbers = [f"N={place}" for place in range(1, len(pages) + 1)]
 
@@ -681,20 +719,32 @@ def write(signal: xr.DataArray, path: Path) -> None:
         for label, key in texts.items()
         if attributes.get(key) not in (None, "")
     ]
-    head += [
+    columns = [
         f"##NTUPLES= {kind}",
         row("VAR_NAME", "TIME" if is_fid else "FREQUENCY", *names, "PAGE NUMBER"),
         row("SYMBOL", "X", *pages, "N"),
         row("VAR_TYPE", "INDEPENDENT", *("DEPENDENT" for _ in pages), "PAGE"),
         row("VAR_FORM", "AFFN", *("ASDF" for _ in pages), "AFFN"),
         row("VAR_DIM", axis.size, *(axis.size for _ in pages), len(pages)),
-        row("UNITS", "SECONDS" if is_fid else "HZ", *(_line(units) for _ in pages), ""),
+        row("UNITS", "SECONDS" if is_fid else "HZ", *(units for _ in pages), ""),
         row("FIRST", first, *each(lambda c: c[0]), 1),
         row("LAST", last, *each(lambda c: c[-1]), len(pages)),
         row("MIN", min(first, last), *each(np.min), 1),
         row("MAX", max(first, last), *each(np.max), len(pages)),
         row("FACTOR", step, *wide.values(), 1),
     ]
+    # whatever these labels do not give back stands as JSON, in which no text begins a comment
+    trial = Record(values)
+    _facts(_blocks("\n".join([*head, *columns]))[0], trial)
+    said = trial.more | {"long_name": "signal" if is_fid else "spectrum", "history": ""}
+    for name, usual in (("units", "1"), ("sample", ""), ("coil", "")):
+        said[name] = getattr(trial, name) or usual
+    further = further_attributes(
+        {k: v for k, v in attributes.items() if k not in ("carrier_frequency", "nucleus")}, said
+    )
+    if further:
+        head.append(f"##{FURTHER_LABEL}= " + json.dumps(further).replace("$", "\\u0024"))
+    head += columns
     start = first / step
     start = round(start) if abs(start - round(start)) < 1e-3 else round(start, 3)
     for number, (symbol, whole) in zip(numbers, counts.items(), strict=True):

@@ -6,7 +6,9 @@ import io
 import json
 import math
 import tokenize
+import warnings
 import zipfile
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any, BinaryIO
 
@@ -16,7 +18,13 @@ import xarray as xr
 
 from fidkit import signals
 from fidkit.files import write_whole
-from fidkit.formats.record import Record, exact_spacing
+from fidkit.formats.record import (
+    Record,
+    exact_spacing,
+    mapping,
+    plain_value,
+    require_finite,
+)
 from fidkit.params import FidkitError
 
 __all__ = ["read", "write"]
@@ -71,7 +79,9 @@ def _array(file: BinaryIO, size: int, name: str) -> npt.NDArray[Any]:
         if version[0] not in (1, 2):
             raise ValueError(f"format {version} is not known")
         header = np.lib.format.read_array_header_1_0 if version[0] == 1 else np.lib.format.read_array_header_2_0  # fmt: skip
-        shape, fortran, dtype = header(file)
+        with warnings.catch_warnings():  # of Python's parser, about damaged text
+            warnings.simplefilter("ignore")
+            shape, fortran, dtype = header(file)
         if dtype.hasobject:
             raise FidkitError(f"{name} holds Python objects; save an array of plain numbers")
         wanted = math.prod(shape) * dtype.itemsize
@@ -94,6 +104,8 @@ def _array(file: BinaryIO, size: int, name: str) -> npt.NDArray[Any]:
 
 def _archive(archive: zipfile.ZipFile, size: int) -> Record:
     members = {info.filename.removesuffix(".npy"): info for info in archive.infolist()}
+    if len(members) < len(archive.infolist()):
+        raise FidkitError("holds two arrays of one name; save it again with numpy.savez")
     unpacked = sum(info.file_size for info in members.values())
     if unpacked > LARGEST_UNPACKED and unpacked > 100 * size:
         raise FidkitError(
@@ -108,9 +120,10 @@ def _archive(archive: zipfile.ZipFile, size: int) -> Record:
     known = [name for name in ("data", "signal") if name in members]
     if len(known) != 1:
         raise FidkitError(
-            f"must hold one array called data or signal; got {', '.join(sorted(members)) or 'nothing'}"
+            f"must hold one array called data or signal; got {', '.join(sorted(members))[:200] or 'nothing'}"
         )
     record = Record(load(known[0]))
+    along: dict[str, Any] = {}
     for name in members:
         if name in known:
             continue
@@ -119,8 +132,8 @@ def _archive(archive: zipfile.ZipFile, size: int) -> Record:
             if value.size != 1 or value.dtype.kind not in "iuf":
                 raise FidkitError(f"{name} must be one number; got {value.dtype} of {value.shape}")
             setattr(record, name, float(value.reshape(()).item()))
-        elif name in TEXTS:
-            setattr(record, name, str(value.reshape(-1)[0]) if value.size == 1 else None)
+        elif name in TEXTS and value.size == 1:
+            setattr(record, name, str(value.reshape(-1)[0]))
         elif name == "frequency":
             if value.dtype.kind not in "iuf":
                 raise FidkitError(f"frequency must be numbers of Hz; got {value.dtype}")
@@ -128,8 +141,9 @@ def _archive(archive: zipfile.ZipFile, size: int) -> Record:
         elif name == "dims" and value.dtype.kind == "U":
             record.dims = tuple(str(part) for part in value.reshape(-1))
         elif name == "attributes" and value.dtype.kind == "U" and value.size == 1:
-            found = _mapping(str(value.reshape(-1)[0]), name)
-            record.more |= {k: v for k, v in found.items() if isinstance(v, str | int | float)}
+            record.keep(mapping(str(value.reshape(-1)[0]), name))
+        elif name == "layout_of_coordinates":
+            along = mapping(str(value.reshape(-1)[0]) if value.size == 1 else "", name)
         elif name.startswith(COORDINATE):
             record.coords[name.removeprefix(COORDINATE)] = value
         elif value.size == 1 and value.dtype.kind in "iufU":
@@ -138,7 +152,6 @@ def _archive(archive: zipfile.ZipFile, size: int) -> Record:
             record.notes.append(
                 f"{name} ({value.dtype} of {value.shape}) is not known and left out"
             )
-    along = _mapping(record.more.pop("layout_of_coordinates", "{}"), "layout_of_coordinates")
     for name, value in record.coords.items():
         try:
             facts = along.get(name, {})
@@ -148,16 +161,6 @@ def _archive(archive: zipfile.ZipFile, size: int) -> Record:
         except (ValueError, TypeError, AttributeError) as error:
             raise FidkitError(f"coordinate {name}: {error}") from None
     return record
-
-
-def _mapping(text: Any, name: str) -> dict[str, Any]:
-    try:
-        found = json.loads(text)
-    except (ValueError, TypeError, RecursionError):
-        found = None
-    if not isinstance(found, dict):
-        raise FidkitError(f"{name} must be JSON, a mapping of names")
-    return found
 
 
 def write(signal: xr.DataArray, path: Path) -> None:
@@ -173,8 +176,9 @@ def write(signal: xr.DataArray, path: Path) -> None:
     Raises
     ------
     FidkitError
-        If a coordinate is neither numbers nor text.
+        For values that are not finite.
     """
+    require_finite(signal.values)
     axis = np.asarray(signal[signal.dims[-1]].values, dtype=float)
     attributes = dict(signal.attrs)
     entries: dict[str, Any] = {
@@ -194,10 +198,6 @@ def write(signal: xr.DataArray, path: Path) -> None:
         if signal.dims[-1] in coordinate.dims:
             continue
         values = np.asarray(coordinate.values)
-        if values.dtype.kind == "O":
-            values = values.astype(str)
-        if values.dtype.kind not in "biufcUmM":
-            raise FidkitError(f"coordinate {name} must be numbers or text; got {values.dtype}")
         # some versions of xarray hang metadata on the dtype of text, which numpy cannot write
         entries[COORDINATE + name] = values.astype(values.dtype.str)
         facts[name] = {
@@ -211,8 +211,5 @@ def write(signal: xr.DataArray, path: Path) -> None:
     write_whole(path, target.getvalue())
 
 
-def _plain(attributes: Any) -> dict[str, Any]:
-    return {
-        str(key): value.item() if isinstance(value, np.generic) else value
-        for key, value in attributes.items()
-    }
+def _plain(attributes: Mapping[Any, Any]) -> dict[str, Any]:
+    return {str(key): plain_value(value) for key, value in attributes.items()}

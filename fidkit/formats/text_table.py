@@ -10,10 +10,13 @@
     0.0002,0.49,-0.08
 
 Instead of a time column the line ``# dwell_time_s: ...`` will do. A spectrum has ``frequency_hz``.
+The line of the columns may be a comment too. Attributes that such a line cannot say stand as JSON in
+``# attributes: {...}``.
 """
 
 from __future__ import annotations
 
+import contextlib
 import json
 import re
 from pathlib import Path
@@ -25,37 +28,54 @@ import xarray as xr
 
 from fidkit import signals
 from fidkit.files import write_whole
-from fidkit.formats.record import Record, exact_spacing, printed_unit, real_number, text_of
+from fidkit.formats.record import (
+    FREQUENCY_UNITS,
+    TIME_UNITS,
+    Record,
+    exact_spacing,
+    further_attributes,
+    mapping,
+    printed_unit,
+    real_number,
+    require_finite,
+    text_of,
+)
 from fidkit.params import FidkitError
 
 __all__ = ["looks_like", "read", "write"]
 
-UNITS = {
-    "s": 1.0,
-    "ms": 1e-3,
-    "us": 1e-6,
-    "µs": 1e-6,
-    "ns": 1e-9,
-    "hz": 1.0,
-    "khz": 1e3,
-    "mhz": 1e6,
-}
-AXIS = re.compile(r"(time)_(s|ms|us|µs|ns)|(frequency)_(hz|khz|mhz)")
+UNITS = TIME_UNITS | FREQUENCY_UNITS
+OF_TIME, OF_FREQUENCY = "|".join(TIME_UNITS), "|".join(FREQUENCY_UNITS)
+AXIS = re.compile(rf"(time)_({OF_TIME})|(frequency)_({OF_FREQUENCY})")
 VALUES = re.compile(r"(real|imag|imaginary|signal)(?:_(\w+))?")
 #: Keys that are numbers with a unit in their name.
-MEASURED = re.compile(r"(carrier_frequency)_(hz|khz|mhz)|(dwell_time|time_start)_(s|ms|us|µs|ns)")
+MEASURED = re.compile(rf"(carrier_frequency)_({OF_FREQUENCY})|(dwell_time|time_start)_({OF_TIME})")
+TEXTS = ("nucleus", "sample", "coil", "units")
+#: What must not be stated twice.
+FACTS = (*TEXTS, *signals.SIGNAL_ATTRIBUTES, "carrier_frequency", "dwell_time", "filter_delay")
 BARE = ("carrier_frequency", "dwell_time", "time_start")
 COLUMNS = "such as time_s,real,imag or time_us,signal or frequency_hz,real"
 
 
 def looks_like(text: str) -> bool:
-    """Whether the first line that is no comment names columns that fidkit knows."""
+    """Whether the first line that is no comment, or a comment before it, names known columns."""
     for line in text.splitlines():
         plain = line.strip()
-        if plain and not plain.startswith("#"):
+        if plain.startswith("#"):
+            if _named_by(plain):
+                return True
+        elif plain:
             names = [_name(part) for part in re.split(_delimiter(plain), plain)]
             return any(AXIS.fullmatch(name) or VALUES.fullmatch(name) for name in names)
     return False
+
+
+def _named_by(comment: str) -> list[str]:
+    """The columns that a comment lists, where every one of them is known; else none."""
+    plain = comment.lstrip("# \t").strip()
+    names = re.split(_delimiter(plain), plain)
+    known = all(AXIS.fullmatch(_name(name)) or VALUES.fullmatch(_name(name)) for name in names)
+    return names if known else []
 
 
 def _name(text: str) -> str:
@@ -88,10 +108,12 @@ def read(path: Path) -> Record:
     FidkitError
         If a number, column or row is wrong; the line is named.
     """
-    lines = [line.rstrip("\r") for line in text_of(path.read_bytes()).split("\n")]
+    lines = re.split(r"\r\n|\n|\r", text_of(path.read_bytes()))
     record = Record(np.empty(0))
     printed: dict[str, float] = {}  # one unit in the last place of the keys
     header: list[str] | None = None
+    listed: list[str] = []  # columns that a comment names
+    stated: dict[str, tuple[int, str]] = {}
     delimiter = ","
     rows: list[list[str]] = []
     numbers: list[int] = []
@@ -100,18 +122,25 @@ def read(path: Path) -> Record:
         if not plain:
             continue
         if plain.startswith("#"):
-            _key(plain.lstrip("# \t"), number, record, printed)
-        elif header is None:
+            _key(plain.lstrip("# \t"), number, record, printed, stated)
+            listed = _named_by(plain) or listed
+            continue
+        if header is None:
             delimiter = _delimiter(plain)
-            header = [part.strip().strip('"') for part in re.split(delimiter, plain)]
+            header = [_unquoted(part) for part in re.split(delimiter, plain)]
+            if listed and re.match(r"[+-]?\.?\d", header[0]):
+                header, cells = listed, header
+            else:
+                cells = []
             columns = _columns(header, number)
         else:
-            cells = re.split(delimiter, plain)
+            cells = [_unquoted(cell) for cell in re.split(delimiter, plain)]
+        if cells:
             if len(cells) != len(header):
                 comma = plain.count(",") > plain.count(".") and delimiter != ","
                 remedy = "; write decimal points, not commas" if comma or delimiter == "," else ""
                 raise FidkitError(
-                    f"line {number}: has {len(cells)} columns where line 1 of the table names "
+                    f"line {number}: has {len(cells)} columns where the table names "
                     f"{len(header)} ({', '.join(header)}){remedy}"
                 )
             rows.append(cells)
@@ -120,6 +149,7 @@ def read(path: Path) -> Record:
         raise FidkitError(f"holds no table; a line must name the columns, {COLUMNS}")
     if len(rows) < 2:
         raise FidkitError(f"the table must have at least 2 rows; got {len(rows)}")
+    single = record.values.dtype == np.float32
     texts = list(zip(*rows, strict=True))
 
     def column(name: str) -> npt.NDArray[np.float64]:
@@ -138,7 +168,7 @@ def read(path: Path) -> Record:
         record.values.real, record.values.imag = column("real"), column("imag")
     else:
         record.values = column("real")
-    if record.more.pop("precision", "") == "single":
+    if single:
         wanted = np.complex64 if np.iscomplexobj(record.values) else np.float32
         record.values = record.values.astype(wanted)
     value_units = {
@@ -157,12 +187,34 @@ def read(path: Path) -> Record:
     return record
 
 
-def _key(text: str, number: int, record: Record, printed: dict[str, float]) -> None:
+def _unquoted(cell: str) -> str:
+    cell = cell.strip()
+    return cell[1:-1] if len(cell) > 1 and cell[0] == cell[-1] == '"' else cell
+
+
+def _key(
+    text: str,
+    number: int,
+    record: Record,
+    printed: dict[str, float],
+    stated: dict[str, tuple[int, str]],
+) -> None:
+    """Take a line ``key: value`` into the record; `stated` holds those before it."""
     key, colon, value = text.partition(":")
     if not colon:
         return
     name, value = _name(key), value.strip()
     measured = MEASURED.fullmatch(name)
+    fact = next(filter(None, measured.groups())) if measured else name
+    before, other = stated.setdefault(fact, (number, value))
+    if before != number:
+        if fact in FACTS and value != other:
+            raise FidkitError(
+                f"line {number}: states {fact} again, otherwise than line {before}; remove one of them"
+            )
+        if value != other:
+            record.notes.append(f"line {before} says what {fact} is; line {number} does not count")
+        return
     if measured:
         target, unit = (part for part in measured.groups() if part)
         scale = UNITS[unit]
@@ -174,9 +226,14 @@ def _key(text: str, number: int, record: Record, printed: dict[str, float]) -> N
         raise FidkitError(
             f"line {number}: {name} must carry its unit in its name, such as {name}_{unit}; got {name}"
         )
-    elif name in ("nucleus", "sample", "coil", "units"):
-        setattr(record, name, str(_plain(value)))
-    elif name not in ("source", "long_name"):
+    elif name in TEXTS:
+        # an empty one says nothing
+        setattr(record, name, str(_plain(value)) or None)
+    elif (name, value) == ("precision", "single"):
+        record.values = np.empty(0, dtype=np.float32)
+    elif name == "attributes" and value.startswith("{"):
+        record.keep(mapping(value, f"line {number}: attributes"))
+    elif name != "source":
         record.more[name] = _plain(value)
 
 
@@ -296,7 +353,7 @@ def write(signal: xr.DataArray, path: Path) -> None:
     Raises
     ------
     FidkitError
-        For more than one record.
+        For more than one record, or values that are not finite.
     """
     if signal.ndim != 1:
         raise FidkitError(
@@ -304,20 +361,35 @@ def write(signal: xr.DataArray, path: Path) -> None:
             "or write .nc or .zarr"
         )
     values = np.asarray(signal.values)
+    require_finite(values)
     axis = np.asarray(signal[signal.dims[-1]].values, dtype=float)
+    is_fid = signals.is_fid(signal)
+    attributes = signal.attrs | {"carrier_frequency": float(signal.attrs["carrier_frequency"])}
+    said = {
+        "long_name": "signal" if is_fid else "spectrum",
+        "history": "",
+        "sample": "",
+        "coil": "",
+    }
     head = []
-    for key, value in signal.attrs.items():
-        if key == "carrier_frequency":
-            head.append(f"# carrier_frequency_hz: {float(value)!r}")
-        elif key == "time_start":
-            head.append(f"# time_start_s: {float(value)!r}")
-        elif key not in ("source", "long_name") and value != "":
-            head.append(f"# {key}: {_written(value)}")
+    for key, plain in further_attributes(attributes, said).items():
+        unit = {"carrier_frequency": "_hz", "time_start": "_s"}.get(key, "")
+        line, trial = f"{key}{unit}: {_written(plain)}", Record(np.empty(0))
+        with contextlib.suppress(FidkitError):
+            _key(line, 1, trial, {}, {})
+        read = trial.more | {name: getattr(trial, name) for name in (*TEXTS, *BARE)}
+        if not further_attributes({key: plain}, read):
+            head.append(f"# {line}")
+            said[key] = plain
+    # whatever such a line would not give back
+    further = further_attributes(attributes, said)
+    if further:
+        head.append(f"# attributes: {json.dumps(further)}")
     if values.dtype in (np.complex64, np.float32):
         head.append("# precision: single")
-    is_fid = signals.is_fid(signal)
     if is_fid:
-        head.append(f"# dwell_time_s: {exact_spacing(axis)!r}")
+        # all digits, so that the reader sees how exact it is
+        head.append(f"# dwell_time_s: {exact_spacing(axis):.16e}")
         head.append(f"# time_start_s: {float(axis[0])!r}")
     names = ["time_s" if is_fid else "frequency_hz", "real"]
     columns = [axis.tolist(), _texts(values.real)]
@@ -337,4 +409,4 @@ def _written(value: object) -> str:
     if isinstance(value, str):
         plain = value.strip() == value and value.isprintable() and not value.startswith('"')
         return value if plain and _plain(value) == value else json.dumps(value, ensure_ascii=False)
-    return repr(value.item() if isinstance(value, np.generic) else value)
+    return repr(value)

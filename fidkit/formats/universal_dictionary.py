@@ -49,10 +49,12 @@ def read(universal: Mapping[Any, Any], data: Any) -> Record:
         raise FidkitError(
             f"must be a mapping with ndim and one mapping a dimension; got {type(universal).__name__}"
         )
-    if isinstance(data, list | tuple) and len(data) == 2 and np.ndim(data[0]) == 1:
-        values = np.asarray(data[0]) + 1j * np.asarray(data[1])
-    else:
+    try:
         values = np.asarray(data)
+    except ValueError as error:
+        raise FidkitError(f"the parts of the array must be of one length; {error}") from None
+    if values.dtype.kind in "iufc" and isinstance(data, list | tuple) and values.shape[:-1] == (2,):
+        values = values[0] + 1j * values[1]
     if values.dtype.kind not in "iufc":
         raise FidkitError(f"the array must hold numbers; got {values.dtype}")
     if universal["ndim"] != values.ndim or values.ndim == 0:
