@@ -319,7 +319,7 @@ def test_what_cannot_be_known_is_said():
     assert np.isnan(float(silent.linewidth))
     endless = fk.measure(record(line(100, 0) + noise(0.1, 17)))
     near(endless, "linewidth", 0.0)
-    assert "no width" in str(endless.linewidth_status.values)
+    assert "not measurable" in str(endless.linewidth_status.values)
     short = fk.measure(record((line(100, 5) + noise(0.01, 18))[:256]))
     near(short, "linewidth", 5.0)
     assert "too short" in str(short.linewidth_status.values)
@@ -339,6 +339,8 @@ def test_what_cannot_be_known_is_said():
         ({"near": 6000.0}, "near must be a number in [-5000, 5000] Hz"),
         ({"near": "100"}, "near must be a number"),
         ({"near": np.nan}, "near must be a number"),
+        ({"near": 1j}, "near must be a number"),
+        ({"near": [3.0]}, "near must be a number"),
         ({"region": (5.0, 1.0)}, "region must be a pair (low, high)"),
         ({"region": 7}, "region must be a pair"),
         ({"region": (1.0, 1.2)}, "region (1.0, 1.2) Hz holds no point"),
@@ -460,3 +462,123 @@ def test_signal_to_noise_of_a_published_spectrum():
     top = float(real.frequency[int(real.values.argmax())])
     found = fk.measure(real, near=top, noise=ends)
     assert float(found.snr) == pytest.approx(1869.7, rel=per_mille)
+
+
+def test_a_line_outside_the_region_is_not_taken():
+    """A strong line's foot is no line of the region."""
+    alone = fk.measure(record(line(-2000, 30) + noise(1e-3, 50)), region=(100.0, 300.0))
+    assert np.isnan(float(alone.frequency_offset))
+    assert str(alone.frequency_offset_status.values).startswith("missing")
+    weak = record(line(-2000, 30) + line(150, 4, 0.01) + noise(1e-3, 51))
+    found = fk.measure(weak, region=(100.0, 300.0))
+    near(found, "frequency_offset", 150.0)
+    near(found, "linewidth", 4.0)
+
+
+def test_the_line_nearest_to_where_there_is_none():
+    for seed in range(60, 66):
+        found = fk.measure(record(line(-2000, 6) + noise(0.03, seed)), near=140.0)
+        near(found, "frequency_offset", -2000.0)
+
+
+def test_several_lines_near_a_frequency():
+    values = line(100, 5) + line(130, 4) + line(900, 3, 0.3) + line(930, 5, 0.4) + noise(0.01, 52)
+    found = fk.measure(record(values), near=915.0, lines=2)
+    for place, (frequency, width) in enumerate(((900, 3), (930, 5))):
+        near(found.isel(line=place), "frequency_offset", frequency)
+        near(found.isel(line=place), "linewidth", width)
+
+
+def test_noise_alone_is_rarely_a_line():
+    """Source: the stated rate, one record in a thousand; 1,200 records, so at most six."""
+    values = noise(1.0, 53, (1200, 1024))
+    found = fk.measure(record(values))
+    assert int(np.isfinite(found.frequency_offset).sum()) <= 6
+
+
+def test_a_slow_line_near_the_carrier_is_no_offset():
+    time = DWELL * np.arange(1024)
+    for seed, frequency in ((54, -24.9), (55, 3.0), (56, 11.0), (57, -7.7)):
+        values = line(frequency, 0.07, phase=1.965, time=time) + noise(0.01, seed, (1024,))
+        found = fk.measure(record(values))
+        near(found, "frequency_offset", frequency)
+        near(found, "amplitude", 1.0)
+        assert "set aside" not in str(found.status.values)
+
+
+def test_a_history_that_does_not_lead_back():
+    fid = record(line(100, 5) + noise(0.01, 58))
+    for spoiled in (
+        fid.assign_attrs(history="Tue Dec 1 12:00:00 2026: copied by hand"),
+        fk.remove_end(fk.apodize_cosine(fid), keep_points=4000),
+    ):
+        found = fk.measure(spoiled)
+        assert abs(float(found.frequency_offset) - 100) < 0.1
+        assert "as it stands" in found.attrs["notes"]
+        for name in QUANTITIES:
+            assert str(found[f"{name}_status"].values).startswith("doubtful"), name
+
+
+def test_windows_of_their_own_then_combined():
+    """Each record had its own window: what was combined cannot be seen through."""
+    values = np.stack([line(100, width) for width in (4, 5, 6)]) + noise(0.01, 59, (3, POINTS))
+    shots = record(values, dims=("shot",))
+    found = fk.measure(fk.average_shots(fk.apodize_matched(shots)))
+    assert "as it stands" in str(found.status.values)
+    lost = fk.apodize_matched(shots).drop_vars("matched_broadening")
+    assert "as it stands" in str(fk.measure(lost).status.values[0])
+
+
+def test_a_shift_by_hand_leaves_the_field():
+    """Source: the field is where it was; the axis moves."""
+    fid = record(line(100, 5) + noise(0.01, 60))
+    moved = fk.measure(fk.shift_frequency(fid, frequency=1000.0))
+    near(moved, "frequency_offset", 1100.0)
+    near(moved, "field", float(fk.measure(fid).field))
+
+
+def test_signal_to_noise_of_one_shape_out_of_two_lines():
+    """Source: highest point of the noise-free transform over the noise, by brute force."""
+    for apart in (4.0, 7.0):
+        clean = line(100, 5) + line(100 + apart, 5)
+        found = fk.measure(record(clean + noise(0.01, 61)))
+        assert str(found.lineshape.values) == "composite of 2"
+        fine = np.fft.fft(np.concatenate([clean, np.zeros(15 * POINTS)])).real.max()
+        near(found, "snr", fine / (0.01 * np.sqrt(POINTS)))
+
+
+def test_a_small_region_for_the_noise_is_less_sure():
+    """Source: definition of a standard uncertainty; binomial counting error of 200 records."""
+    clean = line(100, 5)
+    values = clean + noise(0.02, 62, (200, POINTS))
+    expected = abs(np.sum(clean * np.exp(-2j * np.pi * 100 * TIME))) / (0.02 * np.sqrt(POINTS))
+    for region in ((-4500.0, -4420.0), (-4500.0, -3000.0)):
+        found = fk.measure(record(values), noise=region)
+        share = float((abs(found.snr - expected) < found.snr_std).mean())
+        assert abs(share - 0.683) < 3 * np.sqrt(0.683 * 0.317 / 200), region
+
+
+def test_zeros_appended_by_hand_are_no_measurement():
+    values = line(100, 5) + noise(0.02, 63)
+    plain = fk.measure(record(values))
+    padded = fk.measure(record(np.concatenate([values, np.zeros(3 * POINTS)])))
+    hundredth = 0.01
+    ratio = float(padded.frequency_offset_std / plain.frequency_offset_std)
+    assert ratio == pytest.approx(1, abs=hundredth)
+
+
+def test_the_decay_is_blind_to_what_lies_far_off():
+    for other in (line(-3000, 5, 10.0), np.full(POINTS, 30.0 + 0j), line(2900, 8, 1.0)):
+        region = (50.0, 150.0)
+        found = fk.measure(record(line(100, 6) + other + noise(0.01, 64)), region=region)
+        near(found, "t2_star_decay", 1 / (6 * np.pi))
+
+
+def test_names_that_results_need():
+    fid = record(np.stack([line(100, 5)] * 2), dims=("field",), coords={"field": [1.5, 1.6]})
+    with pytest.raises(fk.FidkitError, match="field is the name of a result"):
+        fk.measure(fid)
+    lines = record(np.stack([line(100, 5)] * 2), dims=("line",))
+    assert fk.measure(lines).linewidth.dims == ("line",)
+    with pytest.raises(fk.FidkitError, match="line is the name of a result"):
+        fk.measure(lines, lines=2)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -19,6 +20,8 @@ __all__ = ["allowed_points", "constant_offset", "noise_threshold", "with_care"]
 
 MOST_ADDITIONS = 8
 MOST_TONES = 6
+#: A line this much weaker than a steady tone is no reason to call the tone pick-up.
+LEAST_BESIDE_TONES = 0.1
 
 
 def noise_threshold(points: int) -> float:
@@ -77,51 +80,100 @@ def with_care(
     record: Record,
     values: npt.NDArray[Any],
     wanted: Wanted,
-    start: tuple[float, float],
+    starts: list[tuple[float, float]],
+    others: list[tuple[float, float]],
     offset: bool,
-    noise: float | None,
+    noise: tuple[float, int] | None,
 ) -> tuple[list[Line], npt.NDArray[Any]]:
-    """Measure a record with more in it than one plain line.
+    """Measure one record with more in it than one plain line.
 
-    Returns the lines, and what of the record is not the line (for the decay's sake).
+    Parameters
+    ----------
+    record : Record
+        Where it comes from.
+    values : complex array, shape (points,)
+        The record itself.
+    wanted : Wanted
+        Which lines are asked for.
+    starts : list of (float, float)
+        Frequency (Hz) and rate (1/s) of the line to start from; of several the better one is kept.
+    others : list of (float, float)
+        The same of other lines that are known, the most wanted first.
+    offset : bool
+        Whether a constant offset stands out.
+    noise : (float, int), optional
+        Noise from a region that the user named.
+
+    Returns
+    -------
+    lines : list of Line
+        As many as are asked for.
+    rest : complex array, shape (points,)
+        The record less everything that is not the line.
     """
-    original = values
-    spectrum = scipy.fft.fft(values)
-    points, resolution = values.size, 1 / (values.size * record.dwell)
-    allowed = allowed_points(points, record.dwell, wanted.region)
+    points, dwell, start = values.size, record.dwell, record.start
+    resolution = 1 / (points * dwell)
+    allowed = allowed_points(points, dwell, wanted.region)
 
-    def look(fit: Crowd, among: npt.NDArray[np.bool_] | None) -> tuple[float, float, float]:
-        rest = values - numerics.model_in_time(fit, points, record.dwell, record.start).sum(axis=0)
-        found = numerics.search(
-            rest[None] - constant_offset(rest[None]), record.dwell, allowed=among
-        )
+    def modelled(fit: Crowd) -> npt.NDArray[Any]:
+        return numerics.model_in_time(fit, points, dwell, start)
+
+    def look(
+        values: npt.NDArray[Any], fit: Crowd, among: npt.NDArray[np.bool_] | None
+    ) -> tuple[float, float, float]:
+        rest = (values - modelled(fit).sum(axis=0))[None]
+        found = numerics.search(rest - constant_offset(rest), dwell, allowed=among)
         return float(found.frequency[0]), float(found.rate[0]), float(found.energy[0])
 
-    def grow(frequency: float, rate: float) -> tuple[_Model, Crowd, Band]:
-        model = _Model((frequency,), (rate,), named=1, offset=offset)
-        if wanted.lines > 1:
+    def grow(values: npt.NDArray[Any], first: tuple[float, float]) -> tuple[_Model, Crowd, Band]:
+        spectrum = scipy.fft.fft(values)
+        named = [first]
+        if wanted.lines > 1 and wanted.chosen:
+            named += others[: wanted.lines - 1]
+        elif wanted.lines > 1:
             # all peaks at once: one by one, the first would widen until it covers the others
-            peaks = _peaks(values, record.dwell, wanted.lines, allowed)
-            if len(peaks) > 1:
-                rates = (2 * resolution,) * len(peaks)
-                model = replace(model, frequency=peaks, rate=rates, named=len(peaks))
-        fit, band = _fit(record, spectrum, model)
+            peaks = _peaks(values, dwell, wanted.lines)
+            named = [(peak, 2 * resolution) for peak in peaks] if len(peaks) > 1 else named
+        frequency, rate = zip(*named, strict=True)
+        model = _Model(frequency, rate, named=len(named), offset=offset)
+        band = _band(model, points, dwell)
+        inside = np.zeros(points, bool)
+        inside[band.index] = True
+        for line in others[len(named) - 1 :]:
+            if inside[round(line[0] * points * dwell) % points]:
+                model = model.with_line(*line)
+        fit = _fit(record, spectrum, model, band)
+        for _ in range(3):
+            # a start that is far off is caught at the bound of its reach
+            reach = numerics.reach_of(model.rate[0], resolution)
+            if wanted.chosen or abs(fit.frequency[0] - model.frequency[0]) < 0.99 * reach:
+                break
+            model = replace(model, frequency=tuple(fit.frequency), rate=tuple(fit.rate))
+            band = _band(model, points, dwell)
+            fit = _fit(record, spectrum, model, band)
         while model.named < wanted.lines:
-            frequency, rate, energy = look(fit, allowed)
+            among = allowed
+            if wanted.near is not None and allowed is None:
+                among = np.isin(np.arange(points), band.index)
+            one, decay, energy = look(values, fit, among)
             if energy < WEAK_ENERGY:
                 break
-            model = model.with_line(frequency, rate, named=True)
-            fit, band = _fit(record, spectrum, model)
             model = replace(model, frequency=tuple(fit.frequency), rate=tuple(fit.rate))
+            model = model.with_line(one, decay, named=True)
+            band = _band(model, points, dwell)
+            fit = _fit(record, spectrum, model, band)
+        inside = np.zeros(points, bool)
+        inside[band.index] = True
         for _ in range(MOST_ADDITIONS):
-            near_line = np.abs(scipy.fft.fftfreq(points, record.dwell)[:, None] - fit.frequency)
+            model = replace(model, frequency=tuple(fit.frequency), rate=tuple(fit.rate))
+            if model.gaussian is not None:
+                model = replace(model, gaussian=fit.gaussian)
+            near_line = np.abs(scipy.fft.fftfreq(points, dwell)[:, None] - fit.frequency)
             clear = np.maximum(2 * np.abs(fit.rate) / np.pi, 2 * resolution)
-            inside = np.zeros(points, bool)
-            inside[band.index] = True
-            frequency, rate, energy = look(fit, inside & (near_line > clear).all(axis=-1))
+            one, decay, energy = look(values, fit, inside & (near_line > clear).all(axis=-1))
             trials = []
             if energy > noise_threshold(points):
-                trials.append(model.with_line(frequency, rate))
+                trials.append(model.with_line(one, decay))
             if not model.background:
                 trials.append(replace(model, background=True))
             if not model.offset and inside[0]:
@@ -130,56 +182,35 @@ def with_care(
                 width = abs(fit.rate[0]) + resolution
                 trials.append(replace(model, gaussian=(width / 2) ** 2))
                 trials.append(replace(model, gaussian=width**2, only_gaussian=True))
-            if not trials:
-                break
             fits = [(_fit(record, spectrum, trial, band), trial) for trial in trials]
-            (best, _), trial = min(fits, key=lambda item: item[0][0].criterion)
+            best, trial = min(fits, key=lambda item: item[0].criterion, default=(fit, model))
             if best.criterion > fit.criterion - ADDITION_COST:
                 break
-            fit = best
-            model = replace(
-                trial,
-                frequency=tuple(fit.frequency),
-                rate=tuple(fit.rate),
-                gaussian=trial.gaussian and fit.gaussian,
-            )
+            fit, model = best, trial
         return model, fit, band
 
-    model, fit, band = grow(*start)
+    def left_over(grown: tuple[_Model, Crowd, Band]) -> float:
+        rest = values - modelled(grown[1]).sum(axis=0)
+        return float(np.linalg.norm(rest - rest.mean()))
+
+    model, fit, band = min((grow(values, first) for first in starts), key=left_over)
     notes: list[str] = []
-    if wanted.lines == 1 and wanted.near is None and not _decays(fit, resolution):
-        # what does not decay is pick-up, not an FID: look behind it
-        kept, whole = (model, fit, band), values
-        tones = []
-        for _ in range(MOST_TONES):
-            tones.append(f"{fit.frequency[0]:.1f}")
-            values = values - numerics.model_in_time(fit, points, record.dwell, record.start)[0]
-            spectrum = scipy.fft.fft(values)
-            found = numerics.search(
-                values[None] - constant_offset(values[None]), record.dwell, allowed=allowed
-            )
-            if found.energy[0] < WEAK_ENERGY:
-                break
-            model, fit, band = grow(float(found.frequency[0]), float(found.rate[0]))
-            if _decays(fit, resolution):
-                plural = "s" if len(tones) > 1 else ""
-                notes.append(
-                    f"steady tone{plural} at {', '.join(tones)} Hz, stronger than the line, set aside"
-                )
-                break
-        if not notes:
-            (model, fit, band), values = kept, whole
-    tone = original - values
+    tones = np.zeros_like(values)
+    if wanted.lines == 1 and not wanted.chosen and not _decays(fit, resolution):
+        found = _behind_tones(values, fit, resolution, grow, look, modelled)
+        if found is not None:
+            (model, fit, band), tones, note = found
+            notes.append(note)
     lines = [_from_crowd(fit, place, record, band, model, noise) for place in range(model.named)]
     members = [0]
     if wanted.lines == 1:
         members = _overlapping(fit, resolution, 0)
         if len(members) > 1:
-            _make_composite(lines[0], fit, members)
+            _make_composite(lines[0], fit, members, record)
     for place in range(model.named if wanted.lines > 1 else 0):
-        others = [n for n in _overlapping(fit, resolution, place) if n >= model.named]
-        if others:
-            where = ", ".join(f"{fit.frequency[n]:.1f}" for n in others)
+        unnamed = [n for n in _overlapping(fit, resolution, place) if n >= model.named]
+        if unnamed:
+            where = ", ".join(f"{fit.frequency[n]:.1f}" for n in unnamed)
             text = f"overlaps with a further line at {where} Hz; ask for more lines"
             lines[place].notes.append(text)
             for name in ("frequency_offset", "linewidth", "t2_star", "amplitude", "phase"):
@@ -188,16 +219,45 @@ def with_care(
     lines += [nothing() for _ in range(wanted.lines - model.named)]
     for line in lines:
         line.notes = notes + line.notes
-    modelled = numerics.model_in_time(fit, points, record.dwell, record.start)
-    others = np.delete(modelled, members, axis=0).sum(axis=0)
+    rest = values - tones - np.delete(modelled(fit), members, axis=0).sum(axis=0)
     if model.offset:
-        others = others + fit.linear[-1]
-    return lines, others + tone
+        rest = rest - fit.linear[-1]
+    return lines, rest
 
 
-def _peaks(
-    values: npt.NDArray[Any], dwell: float, most: int, allowed: npt.NDArray[np.bool_] | None
-) -> tuple[float, ...]:
+def _behind_tones(
+    values: npt.NDArray[Any],
+    fit: Crowd,
+    resolution: float,
+    grow: Callable[..., tuple[_Model, Crowd, Band]],
+    look: Callable[..., tuple[float, float, float]],
+    modelled: Callable[[Crowd], npt.NDArray[Any]],
+) -> tuple[tuple[_Model, Crowd, Band], npt.NDArray[Any], str] | None:
+    """Look for an FID behind what does not decay: that is pick-up, if there is a line besides."""
+    tones: list[float] = []
+    rest = values
+    strongest = abs(fit.scale[0])
+    for _ in range(MOST_TONES):
+        if any(abs(fit.frequency[0] - tone) < resolution for tone in tones):
+            return None  # what was taken off comes back: no tone then
+        tones.append(float(fit.frequency[0]))
+        one, decay, energy = look(rest, fit, None)
+        if energy < WEAK_ENERGY:
+            return None
+        rest = rest - modelled(fit)[0]
+        grown = grow(rest, (one, decay))
+        fit = grown[1]
+        if _decays(fit, resolution):
+            if abs(fit.scale[0]) < LEAST_BESIDE_TONES * strongest:
+                return None
+            plural = "s" if len(tones) > 1 else ""
+            where = ", ".join(f"{tone:.1f}" for tone in tones)
+            note = f"steady tone{plural} at {where} Hz, stronger than the line, set aside"
+            return grown, values - rest, note
+    return None
+
+
+def _peaks(values: npt.NDArray[Any], dwell: float, most: int) -> tuple[float, ...]:
     """Frequencies of the highest peaks that stand clear of their surroundings."""
     from scipy.signal import find_peaks
 
@@ -207,8 +267,6 @@ def _peaks(
     # neighbouring points of noise alone differ by 0.67 of its spread half of the time
     noise = np.median(np.abs(height[2:] - height[:-2])) / 0.67
     peaks, _ = find_peaks(height, prominence=8 * noise)
-    if allowed is not None:
-        peaks = peaks[scipy.fft.fftshift(np.repeat(allowed, 2))[peaks]]
     peaks = peaks[np.argsort(height[peaks])[::-1][:most]]
     return tuple(scipy.fft.fftshift(scipy.fft.fftfreq(2 * points, dwell))[peaks].tolist())
 
@@ -225,11 +283,17 @@ def _overlapping(fit: Crowd, resolution: float, first: int) -> list[int]:
     return sorted(members)
 
 
-def _make_composite(line: Line, fit: Crowd, members: list[int]) -> None:
+def _make_composite(line: Line, fit: Crowd, members: list[int], record: Record) -> None:
     """Take the numbers of a line from the whole shape of which it is a part."""
     values, covariance = numerics.composite(fit, members)
     std = np.sqrt(np.diag(covariance))
-    # the top of the whole over that of its strongest part: noise is the same
+    time = record.start + record.dwell * np.arange(record.values.shape[1])
+    parts = numerics.model_in_time(fit, time.size, record.dwell, record.start)
+    turn = record.weight * np.exp(-2j * np.pi * values[0] * time - 1j * values[3])
+    alone = record.weight * np.exp(-2j * np.pi * line.frequency * time - 1j * line.phase)
+    # height of the whole over that of its first part; the noise is the same
+    higher = float((parts[members] @ turn).sum().real / (parts[0] @ alone).real)
+    line.snr, line.snr_std = higher * line.snr, higher * line.snr_std
     line.frequency, line.width, line.amplitude, line.phase = (float(part) for part in values)
     line.frequency_std, line.width_std, line.amplitude_std, line.phase_std = (
         float(part) for part in std
@@ -251,18 +315,21 @@ def _decays(fit: Crowd, resolution: float, place: int = 0) -> bool:
     return bool(surely or (place == 0 and fit.gaussian > resolution**2))
 
 
-def _fit(
-    record: Record, spectrum: npt.NDArray[Any], model: _Model, band: Band | None = None
-) -> tuple[Crowd, Band]:
-    """Fit a model on its band, or on a given one (to compare models on the same points)."""
+def _band(model: _Model, points: int, dwell: float) -> Band:
+    """The transform points around all lines that are asked for."""
+    rates = np.array(model.rate[: model.named])
+    pieces = [
+        numerics.band_around(np.array([place]), int(half), points, dwell).index[0]
+        for place, half in zip(
+            model.frequency, numerics.half_band(rates, points, dwell), strict=False
+        )
+    ]
+    return Band(np.unique(np.concatenate(pieces))[None], points, dwell)
+
+
+def _fit(record: Record, spectrum: npt.NDArray[Any], model: _Model, band: Band) -> Crowd:
+    """Fit a model on a band; models are compared on the same one."""
     points, dwell = spectrum.size, record.dwell
-    if band is None:
-        rates, places = np.array(model.rate[: model.named]), np.array(model.frequency)
-        pieces = [
-            numerics.band_around(places[n : n + 1], int(half), points, dwell).index[0]
-            for n, half in enumerate(numerics.half_band(rates, points, dwell))
-        ]
-        band = Band(np.unique(np.concatenate(pieces))[None], points, dwell)
     index = band.index[0]
     columns = []
     if model.background:
@@ -271,7 +338,7 @@ def _fit(
         columns += [np.ones(index.size), away / (np.abs(away).max() or 1)]
     if model.offset:
         columns.append(points * (index == 0))
-    fit = numerics.fit_crowd(
+    return numerics.fit_crowd(
         spectrum[index],
         numerics.shapes_of_record(band, record.start, gaussian=model.gaussian is not None),
         np.array(model.frequency),
@@ -281,11 +348,15 @@ def _fit(
         only_gaussian=model.only_gaussian,
         columns=np.array(columns, dtype=complex).T if columns else None,
     )
-    return fit, band
 
 
 def _from_crowd(
-    fit: Crowd, place: int, record: Record, band: Band, model: _Model, noise: float | None
+    fit: Crowd,
+    place: int,
+    record: Record,
+    band: Band,
+    model: _Model,
+    noise: tuple[float, int] | None,
 ) -> Line:
     scale = complex(fit.scale[place])
     amplitude, phase = abs(scale), float(np.angle(scale))

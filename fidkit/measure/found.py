@@ -40,6 +40,11 @@ class Wanted:
     lines: int
     noise: tuple[float, float] | None
 
+    @property
+    def chosen(self) -> bool:
+        """Whether it is not simply the strongest."""
+        return self.near is not None or self.region is not None
+
 
 @dataclass
 class Line:
@@ -63,11 +68,9 @@ class Line:
     status: dict[str, str] = field(default_factory=dict)
 
 
-def nothing() -> Line:
-    line = Line()
-    line.notes.append("no line above the noise")
-    line.status = dict.fromkeys(QUANTITIES, "missing: no line above the noise")
-    return line
+def nothing(why: str = "no line above the noise") -> Line:
+    """A line that is not there, with the reason."""
+    return Line(notes=[why], status=dict.fromkeys(QUANTITIES, f"missing: {why}"))
 
 
 def line_of(
@@ -81,12 +84,15 @@ def line_of(
     covariance: npt.NDArray[Any],
     noise: float,
     count: int,
-    noise_given: float | None,
+    noise_given: tuple[float, int] | None,
 ) -> Line:
     """All numbers of one line; `covariance` is of (frequency, rate, G, ln amplitude, phase).
 
     `noise` is that of each part of a raw point; `count` the complex points it was found from.
+    `noise_given` is the same from a region that the user named, for the signal to noise ratio.
     """
+    if not np.isfinite(covariance).all() or covariance[0, 0] > (0.5 / record.dwell) ** 2:
+        return nothing("nothing that could be told from noise as a line")
     points = record.values.shape[1]
     length = points * record.dwell
     width, by_rate, by_gaussian = numerics.voigt_width(rate, gaussian)
@@ -110,21 +116,22 @@ def line_of(
     tilt = np.array(
         [0, -(time * envelope).sum() / total, -(time**2 * envelope).sum() / total, 1, 0]
     )
-    seen_noise = noise if noise_given is None else noise_given
+    seen_noise, seen_count = (noise, count) if noise_given is None else noise_given
     if seen_noise > 0:
         line.snr = float(height / (seen_noise * np.sqrt((record.weight**2).sum())))
-        line.snr_std = line.snr * float(np.sqrt(tilt @ covariance @ tilt + 1 / (4 * count)))
+        line.snr_std = line.snr * float(np.sqrt(tilt @ covariance @ tilt + 1 / (4 * seen_count)))
     strength = amplitude * np.exp(-rate * time - gaussian * time**2)
     energy = float((strength**2).sum() / (2 * noise**2)) if noise > 0 else np.inf
     if energy < WEAK_ENERGY:
-        text = f"doubtful: weak signal (energy {energy:.0f} of the noise, {WEAK_ENERGY:.0f} wanted)"
-        line.status = dict.fromkeys(QUANTITIES, text)
+        line.status = dict.fromkeys(QUANTITIES, "doubtful: signal too weak to trust")
         line.notes.append("weak signal")
+    elif line.amplitude_std > 0.3 * amplitude:
+        line.status["amplitude"] = "doubtful: hardly told from zero; its errors are not symmetric"
     if width < 2 * line.width_std or width * length < 1 / np.pi:
         bound = max(width, 0.0) + 2 * line.width_std
         text = f"doubtful: the record of {length:.3g} s is too short for this width"
         if width < 2 * line.width_std:
-            text = f"doubtful: not told from no width at all; below {bound:.2g} Hz"
+            text = f"doubtful: width not measurable in this record; less than {bound:.2g} Hz"
         for name in ("linewidth", "linewidth_ppm", "t2_star"):
             line.status[name] = text
         line.notes.append("decays too little within the record")

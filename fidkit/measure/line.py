@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from numbers import Real
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -11,12 +12,12 @@ import xarray as xr
 
 from fidkit import signals
 from fidkit.measure.found import QUANTITIES, Line, Wanted
-from fidkit.measure.record import Record, Unseen, record_of
+from fidkit.measure.record import Record, Unseen, record_as_it_stands, record_of, total_shift
 from fidkit.measure.recorded import measure_block
 from fidkit.measure.standing import measure_standing
 from fidkit.nuclei import find_nucleus
 from fidkit.numerics.lines import ADDITION_COST
-from fidkit.params import FidkitError, ParameterError
+from fidkit.params import FidkitError, ParameterError, shown
 from fidkit.threads import in_threads
 
 if TYPE_CHECKING:
@@ -29,7 +30,7 @@ METHOD = (
     "the line; windows divided out, truncation in the model; a background, a further line or a "
     "Gaussian part is kept where it lowers the Bayesian information criterion by more than "
     f"{ADDITION_COST:g}; t2_star_decay by an exponential laid through the decay in its first three "
-    "time constants"
+    "time constants; uncertainties hold for the shape chosen"
 )
 METHOD_STANDING = (
     "least-squares fit of Lorentzian lines and a constant to the spectrum as it stands, within 25 "
@@ -97,29 +98,40 @@ def measure(
     wanted = _checked(signal, near, region, lines, noise)
     results: list[list[Line]] = []
     notes = [line for line in str(signal.attrs.get("notes", "")).splitlines() if line]
+    record: Record | None
+    reason = ""
     try:
         record = record_of(signal)
+    except Unseen as why:
+        reason = str(why)
+        record = record_as_it_stands(signal) if signals.is_fid(signal) else None
+    points = signal.shape[-1] if record is None else record.values.shape[1]
+    if points < FEWEST_POINTS:
+        raise FidkitError(
+            f"measure: needs at least {FEWEST_POINTS} measured points; got {points}; "
+            "record for longer"
+        )
+    if record is not None:
         method = METHOD
-        if record.values.shape[1] < FEWEST_POINTS:
-            raise FidkitError(
-                f"measure: needs at least {FEWEST_POINTS} measured points; "
-                f"got {record.values.shape[1]}; record for longer"
-            )
         for found in in_threads(lambda block: measure_block(block, wanted), _blocks(record)):
             results += found
-    except Unseen as reason:
+    else:
         method = METHOD_STANDING
+        frequency = signal["frequency"].values
+        for values in signal.values.reshape(-1, points):
+            results.append(measure_standing(values, frequency, wanted))
+    if reason:
         notes.append(
             f"measured as it stands, since {reason}: the linewidth holds any apodization, and the "
             "uncertainties take neighbouring points as independent"
         )
-        frequency = signal["frequency"].values
-        if signal.shape[-1] < FEWEST_POINTS:
-            raise FidkitError(
-                f"measure: needs at least {FEWEST_POINTS} points; got {signal.shape[-1]}"
-            ) from None
-        for values in signal.values.reshape(-1, signal.shape[-1]):
-            results.append(measure_standing(values, frequency, wanted))
+        for line in (line for found in results for line in found):
+            for name in QUANTITIES:
+                line.status.setdefault(
+                    name, "doubtful: measured as it stands, with any apodization"
+                )
+            if np.isfinite(line.frequency):
+                line.notes.append("measured as it stands")
     return _dataset(signal, results, lines, method, notes)
 
 
@@ -132,6 +144,13 @@ def _checked(
 ) -> Wanted:
     signals.check_signal(signal, "measure")
     in_time = signals.is_fid(signal)
+    taken = set(QUANTITIES) | {"lineshape", "status"} | ({"line"} if lines != 1 else set())
+    clash = sorted(taken & {str(name) for name in (*signal.dims, *signal.coords)})
+    if clash:
+        raise FidkitError(
+            f"measure: {', '.join(clash)} is the name of a result and may not be that of a dimension "
+            "or coordinate of the signal too; rename it with .rename"
+        )
     if not np.isfinite(signal.values).all():
         raise FidkitError("measure: the signal must be finite; cut out or repair its NaN values")
     if "nucleus" not in signal.attrs:
@@ -157,14 +176,18 @@ def _checked(
         if not (low <= first < second <= high):
             raise ParameterError(
                 f"measure: {name} must be a pair (low, high) of numbers within {limits}, "
-                f"or None; got {value!r}"
+                f"or None; got {shown(value)}"
             )
         return first, second
 
-    if near is not None and (isinstance(near, str | bool) or not low <= near <= high):
-        raise ParameterError(f"measure: near must be a number in {limits}, or None; got {near!r}")
+    if near is not None and (
+        isinstance(near, bool) or not isinstance(near, Real) or not low <= float(near) <= high
+    ):
+        raise ParameterError(
+            f"measure: near must be a number in {limits}, or None; got {shown(near)}"
+        )
     if isinstance(lines, bool) or not isinstance(lines, int | np.integer):
-        raise ParameterError(f"measure: lines must be a whole number; got {lines!r}")
+        raise ParameterError(f"measure: lines must be a whole number; got {shown(lines)}")
     if not 1 <= lines <= MOST_LINES:
         raise ParameterError(f"measure: lines must be in [1, {MOST_LINES}]; got {lines!r}")
     return Wanted(
@@ -214,7 +237,8 @@ def _dataset(
     with np.errstate(divide="ignore", invalid="ignore"):
         t2_star = np.where(width > 0, 1 / (np.pi * width), np.nan)
         t2_star_std = t2_star * width_std / width
-    tesla = (carrier + frequency) / nucleus.hertz_per_tesla()
+    # a line that was shifted by hand is still where it was in the field
+    tesla = (carrier + frequency - total_shift(signal)) / nucleus.hertz_per_tesla()
     tesla_std = tesla * np.hypot(
         frequency_std / (carrier + frequency), nucleus.relative_uncertainty
     )

@@ -19,13 +19,14 @@ from fidkit.chain import Call, chain_of
 from fidkit.params import FidkitError
 from fidkit.steps.transform import inverse_transform
 
-__all__ = ["Record", "Unseen", "record_of"]
+__all__ = ["Record", "Unseen", "record_as_it_stands", "record_of", "total_shift"]
 
 #: Smallest weight that is divided out again, of the largest, by the precision of the values:
 #: rounding errors, of 1e-16 and 1e-7, grow by its inverse and must stay far below any noise.
 SMALLEST_WEIGHT = {8: 1e-3, 16: 1e-8}
 
 WINDOWS = "fidkit.steps.apodization"
+COMBINING = {"average_shots", "combine_channels"}
 #: Steps between transform and measurement that leave the way back open.
 UNDONE = ("correct_phase", "auto_phase", "correct_baseline")
 
@@ -38,14 +39,20 @@ class Unseen(Exception):
 class Record:
     """Records behind a signal, of shape (records, points), and how the signal weights them.
 
-    `weight` has the shape (points,) or (records, points) and belongs to the signal as it stands;
-    `values` are free of it. `fixed` says whether the weight is the same for all records.
+    `weight` has the shape (points,) where it is the same for all, else (records, points); it
+    belongs to the signal as it stands, and `values` are free of it.
     """
 
     values: npt.NDArray[Any]
     weight: npt.NDArray[Any]
     start: float
     dwell: float
+
+
+def record_as_it_stands(fid: xr.DataArray) -> Record:
+    """The points of an FID whose history does not lead back: nothing is divided out."""
+    values = fid.values.reshape(-1, fid.shape[-1]).astype(np.complex128)
+    return Record(values, np.ones(fid.shape[-1]), signals.time_start(fid), signals.dwell_time(fid))
 
 
 def record_of(signal: xr.DataArray) -> Record:
@@ -83,6 +90,12 @@ def record_of(signal: xr.DataArray) -> Record:
         signals.require_complex(signal, "measure")
     measured = signals.acquired_points(fid)
     values = fid.values[..., :measured].reshape(-1, measured)
+    if signal is fid:
+        # zeros that were appended by hand are no measurement either
+        silent = int((values != 0).any(axis=0)[::-1].argmax())
+        if silent > 0.05 * measured:
+            measured -= silent
+            values = values[:, :measured]
     start, dwell = signals.time_start(fid), signals.dwell_time(fid)
     weight = _weight(signal, calls, measured, start, dwell)
     if half:
@@ -105,6 +118,18 @@ def record_of(signal: xr.DataArray) -> Record:
         start=start + first * dwell,
         dwell=dwell,
     )
+
+
+def total_shift(signal: xr.DataArray) -> float:
+    """By how much the steps in a signal's history moved its lines, Hz."""
+    try:
+        calls = chain_of(signal).calls
+    except FidkitError:
+        return 0.0
+    moved = [
+        call.arguments.get("frequency", 0.0) for call in calls if call.step == "shift_frequency"
+    ]
+    return sum(float(shift) for shift in moved if isinstance(shift, float))
 
 
 def _back(spectrum: xr.DataArray, calls: tuple[Call, ...]) -> tuple[xr.DataArray, bool]:
@@ -152,8 +177,12 @@ def _weight(
         if call.spec.room != WINDOWS:
             continue
         before = probe
-        probe = _window(signal, call, probe)
         later = {c.step for c in calls[place + 1 :]}
+        if call.step == "apodize_matched" and (
+            "matched_broadening" not in signal.coords or later & COMBINING
+        ):
+            raise Unseen(f"records were combined after {call.step}, each with a window of its own")
+        probe = _window(signal, call, probe)
         if later & {"remove_start", "remove_end", "remove_filter_delay", "rebuild_start"}:
             # a window that depends on the extent of the record was another one then
             shorter = _window(signal, call, ones(1)).values

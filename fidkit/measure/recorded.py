@@ -9,7 +9,7 @@ import numpy.typing as npt
 import scipy.fft
 
 from fidkit.measure.careful import allowed_points, constant_offset, noise_threshold, with_care
-from fidkit.measure.found import Line, Wanted, line_of, nothing
+from fidkit.measure.found import WEAK_ENERGY, Line, Wanted, line_of, nothing
 from fidkit.measure.record import Record
 from fidkit.numerics import lines as numerics
 from fidkit.numerics.lines import ADDITION_COST
@@ -17,26 +17,32 @@ from fidkit.params import FidkitError
 
 __all__ = ["measure_block"]
 
+#: Lines taken off a record at most, to find the one that is asked for.
+MOST_LINES = 16
+
 
 def measure_block(record: Record, wanted: Wanted) -> list[list[Line]]:
     """All records of a block: one plain line each where that will do, else with care."""
     values, dwell = record.values, record.dwell
     records, points = values.shape
-    spectrum = scipy.fft.fft(values, axis=-1)
     # a constant offset is no line; where it stands out it is kept out of the search
     level = constant_offset(values)
     clean = values - level[:, None]
-    allowed = allowed_points(points, dwell, wanted.region)
-    found = numerics.search(clean, dwell, allowed=allowed)
-    if wanted.near is not None:
-        found = _nearest(clean, dwell, wanted.near, allowed, found)
+    spectrum = scipy.fft.fft(clean, axis=-1)
     noise = None if wanted.noise is None else _noise_in(record, wanted.noise)
     results: list[list[Line]] = [[] for _ in range(records)]
-    rest = values.copy()
+    rest = clean.copy()
 
+    others: list[list[tuple[float, float]]] = [[] for _ in range(records)]
+    if wanted.chosen:
+        found, others = _chosen(clean, dwell, wanted)
+    else:
+        found = numerics.search(clean, dwell)
     seen = found.energy >= noise_threshold(points)
     half = numerics.half_band(found.rate, points, dwell)
-    plain = seen & (wanted.lines == 1)
+    # an offset sits in a single point of the transform, at the carrier: no harm elsewhere
+    at_carrier = np.abs(found.frequency) < 5 * (found.rate + 1 / (points * dwell))
+    plain = seen & (wanted.lines == 1) & ~((level != 0) & at_carrier)
     for width in np.unique(half[plain]):
         rows = np.flatnonzero(plain & (half == width))
         band = numerics.band_around(found.frequency[rows], int(width), points, dwell)
@@ -47,12 +53,15 @@ def measure_block(record: Record, wanted: Wanted) -> list[list[Line]]:
             2j * np.pi * found.frequency[rows] - found.rate[rows],
         )
         limit = ADDITION_COST + np.log(2 * count)
+        resolution = 1 / (points * dwell)
+        moved = np.abs(fit.kappa.imag / (2 * np.pi) - found.frequency[rows])
         enough = (
             fit.converged
             & (fit.gaussian < limit)
             & (fit.background < limit + np.log(2 * count))
             & (fit.other < 2 * np.log(count) + 20)
-            & (-fit.kappa.real * points * dwell > 1)
+            & (-fit.kappa.real > resolution)
+            & (moved < found.rate[rows] + 2 * resolution)
         )
         for place in np.flatnonzero(enough):
             row = rows[place]
@@ -61,62 +70,66 @@ def measure_block(record: Record, wanted: Wanted) -> list[list[Line]]:
         if not seen[row]:
             results[row] = [nothing() for _ in range(wanted.lines)]
         elif not results[row]:
-            results[row], others = with_care(
-                record,
-                values[row],
-                wanted,
-                (float(found.frequency[row]), float(found.rate[row])),
-                bool(level[row]),
-                _at(noise, row),
+            starts = [(float(found.frequency[row]), float(found.rate[row]))]
+            if level[row] and not wanted.chosen:
+                # what was taken for an offset may be a slow line near the carrier
+                raw = numerics.search(values[row : row + 1], dwell)
+                starts.append((float(raw.frequency[0]), float(raw.rate[0])))
+            results[row], rest[row] = with_care(
+                record, values[row], wanted, starts, others[row], bool(level[row]), _at(noise, row)
             )
-            rest[row] -= others
     if wanted.lines == 1:
         _second_opinion(record, rest, [result[0] for result in results])
     return results
 
 
-def _at(values: npt.NDArray[Any] | None, row: int) -> float | None:
-    return None if values is None else float(values[row])
+def _at(noise: tuple[npt.NDArray[Any], int] | None, row: int) -> tuple[float, int] | None:
+    return None if noise is None else (float(noise[0][row]), noise[1])
 
 
-def _nearest(
-    values: npt.NDArray[Any],
-    dwell: float,
-    near: float,
-    allowed: npt.NDArray[np.bool_] | None,
-    strongest: numerics.Found,
-) -> numerics.Found:
-    """Start values of the line nearest to a frequency, record by record."""
-    from scipy.signal import find_peaks, peak_widths
+def _chosen(
+    values: npt.NDArray[Any], dwell: float, wanted: Wanted
+) -> tuple[numerics.Found, list[list[tuple[float, float]]]]:
+    """Start values of the line asked for, record by record, and the other lines of the record.
 
-    points = values.shape[1]
-    axis = scipy.fft.fftshift(scipy.fft.fftfreq(points, dwell))
-    frequency, rate, energy = (
-        np.array(part) for part in (strongest.frequency, strongest.rate, strongest.energy)
-    )
+    A strong line's foot would be taken for the line asked for, so lines are taken off first.
+    """
+    allowed = allowed_points(values.shape[1], dwell, wanted.region)
+    result = np.zeros((3, values.shape[0]))
+    others = []
     for row, one in enumerate(values):
-        widened = max(strongest.rate[row], 1 / (points * dwell))
-        window = np.exp(-widened * dwell * np.arange(points))
-        height = np.abs(scipy.fft.fftshift(scipy.fft.fft(one * window)))
-        noise = np.median(np.abs(np.diff(height))) / 0.67
-        peaks, _ = find_peaks(height, prominence=8 * noise)
-        if allowed is not None:
-            peaks = peaks[scipy.fft.fftshift(allowed)[peaks]]
-        if not peaks.size:
-            energy[row] = 0.0
-            continue
-        place = peaks[np.argmin(np.abs(axis[peaks] - near))]
-        # the magnitude of a line is sqrt(3) wider than its absorption; the window widens it too
-        width = peak_widths(height, [place])[0][0] / (points * dwell) / np.sqrt(3)
-        frequency[row] = axis[place]
-        rate[row] = max(np.pi * width - widened, 1 / (points * dwell))
-        around = scipy.fft.ifftshift(np.arange(points) == place)
-        energy[row] = numerics.search(one[None], dwell, allowed=around).energy[0]
-    return numerics.Found(frequency, rate, energy)
+        lines, rest = numerics.strip(one, dwell, WEAK_ENERGY, MOST_LINES)
+        lines = _without_remains(lines)
+        within = np.ones(lines.frequency.size, bool)
+        if wanted.region is not None:
+            within = (lines.frequency >= wanted.region[0]) & (lines.frequency <= wanted.region[1])
+        order = np.flatnonzero(within)
+        if wanted.near is not None:
+            order = order[np.argsort(np.abs(lines.frequency[order] - wanted.near))]
+        table = np.array([lines.frequency, lines.rate, lines.energy])
+        if order.size:
+            result[:, row] = table[:, order[0]]
+        elif wanted.region is not None:
+            left = numerics.search(rest[None], dwell, allowed=allowed)
+            result[:, row] = left.frequency[0], left.rate[0], left.energy[0]
+        order = np.concatenate([order[1:], np.flatnonzero(~within)])
+        others.append([(float(f), float(r)) for f, r in table[:2, order].T])
+    return numerics.Found(*result), others
 
 
-def _noise_in(record: Record, region: tuple[float, float]) -> npt.NDArray[Any]:
-    """Noise of each part of a raw point, from a region of the weighted transform."""
+def _without_remains(lines: numerics.Found) -> numerics.Found:
+    """Only lines, not what the first rough fits left of stronger ones."""
+    kept: list[int] = []
+    for place in range(lines.frequency.size):
+        apart = np.abs(lines.frequency[kept] - lines.frequency[place])
+        width = 3 * (lines.rate[kept] + lines.rate[place]) / np.pi
+        if not ((apart < width) & (lines.energy[place] < 0.01 * lines.energy[kept])).any():
+            kept.append(place)
+    return numerics.Found(lines.frequency[kept], lines.rate[kept], lines.energy[kept])
+
+
+def _noise_in(record: Record, region: tuple[float, float]) -> tuple[npt.NDArray[Any], int]:
+    """Noise of each part of a raw point, from a region of the weighted transform, and its points."""
     points = record.values.shape[1]
     axis = scipy.fft.fftfreq(points, record.dwell)
     inside = (axis >= region[0]) & (axis <= region[1])
@@ -127,11 +140,18 @@ def _noise_in(record: Record, region: tuple[float, float]) -> npt.NDArray[Any]:
         )
     piece = scipy.fft.fft(record.values * record.weight, axis=-1)[:, inside]
     spread = np.sqrt((piece.real.var(axis=-1) + piece.imag.var(axis=-1)) / 2)
-    return np.asarray(spread / np.sqrt((record.weight**2).sum()))
+    # a window makes neighbours alike: as if there were fewer points
+    alike = (record.weight**2).sum() ** 2 / (record.weight**4).sum() / points
+    count = max(int(inside.sum() * alike), 2)
+    return np.asarray(spread / np.sqrt((record.weight**2).sum())), count
 
 
 def _from_single(
-    fit: numerics.SingleFit, place: int, record: Record, count: int, noise: float | None
+    fit: numerics.SingleFit,
+    place: int,
+    record: Record,
+    count: int,
+    noise: tuple[float, int] | None,
 ) -> Line:
     """A line from a plain fit; amplitude and phase are carried from the first point to time zero."""
     kappa = complex(fit.kappa[place])
@@ -176,14 +196,16 @@ def _second_opinion(record: Record, rest: npt.NDArray[Any], lines: list[Line]) -
     def column(name: str) -> npt.NDArray[Any]:
         return np.array([getattr(lines[row], name) for row in rows])
 
+    frequency, phase, width = column("frequency"), column("phase"), column("width")
+    noise = column("noise")
     value, std = numerics.decay_time(
-        rest[rows],
+        _quiet_outside(record, rest[rows], frequency, width, noise),
         record.start,
         record.dwell,
-        column("frequency"),
-        column("phase"),
-        np.pi * column("width"),
-        column("noise"),
+        frequency,
+        phase,
+        np.pi * width,
+        noise,
     )
     for place, row in enumerate(rows):
         line = lines[row]
@@ -194,3 +216,35 @@ def _second_opinion(record: Record, rest: npt.NDArray[Any], lines: list[Line]) -
         elif line.width > 0 and abs(line.decay - 1 / (np.pi * line.width)) > 3 * line.decay_std:
             line.status.setdefault("t2_star_decay", "doubtful: differs from that of the linewidth")
             line.notes.append("decay and linewidth disagree on T2*")
+
+
+def _quiet_outside(
+    record: Record,
+    rest: npt.NDArray[Any],
+    frequency: npt.NDArray[Any],
+    width: npt.NDArray[Any],
+    noise: npt.NDArray[Any],
+) -> npt.NDArray[Any]:
+    """The records without the lines that stand out far from the one measured: they would beat."""
+    points, dwell = rest.shape[1], record.dwell
+    height = np.abs(scipy.fft.fft(rest, axis=-1))
+    apart = np.abs(scipy.fft.fftfreq(points, dwell) - frequency[:, None])
+    apart = np.minimum(apart, 1 / dwell - apart)
+    half = numerics.half_band(np.pi * width, points, dwell) / (points * dwell)
+    outside = apart > half[:, None]
+    # neither the foot of the line itself nor noise gets higher than this out there
+    top = np.abs(rest[:, : max(4, points // 256)]).max(axis=-1)
+    highest = top / (np.pi * half * dwell) + np.sqrt(2 * (np.log(points) + 10) * points) * noise
+    loud = (outside & (height > highest[:, None])).any(axis=-1)
+    if loud.any():
+        rest = rest.copy()
+    time = dwell * np.arange(points)
+    for row in np.flatnonzero(loud):
+        # without the line itself, whose foot would be fitted
+        turn = np.exp((2j * np.pi * frequency[row] - np.pi * width[row]) * time)
+        own = turn * (np.vdot(turn, rest[row]) / np.vdot(turn, turn))
+        _, left = numerics.strip(
+            rest[row] - own, dwell, 10 * WEAK_ENERGY, MOST_LINES, allowed=outside[row]
+        )
+        rest[row] = left + own
+    return rest

@@ -39,10 +39,12 @@ __all__ = [
     "fit_single",
     "half_band",
     "model_in_time",
+    "reach_of",
     "search",
     "shape_in_band",
     "shapes_of_record",
     "shapes_of_spectrum",
+    "strip",
     "voigt_width",
 ]
 
@@ -158,16 +160,19 @@ def search(
     best = np.full(records, -1.0)
     place = np.zeros(records, dtype=np.int64)
     rate = np.zeros(records)
-    noise = np.full(records, np.inf)
+    # noise twice, as either may hold signal: the end of the record, and most of the transform
+    tail = values[:, -max(points // 10, 8) :]
+    noise = tail.real.var(axis=-1) / 2 + tail.imag.var(axis=-1) / 2
     # a window off by a factor of two from the line's own decay loses only 6 % in height
     decays = 1.0 * 4.0 ** np.arange(0, max(1, int(np.log(points / 4) / np.log(4)) + 1))
     for decay in decays:
         window = np.exp(-decay / points * index)
         power = np.abs(scipy.fft.fft(values * window, axis=-1)) ** 2 / (window**2).sum()
-        # the median of an exponential distribution is ln 2 of its mean 2 sigma^2; some hundreds of
-        # points give it to a few per cent
-        some = power[:, :: max(1, points // 1024)]
-        noise = np.minimum(noise, np.median(some, axis=-1) / (2 * np.log(2)))
+        if decay == decays[0]:
+            # the median of an exponential distribution is ln 2 of its mean 2 sigma^2; a thousand
+            # points give it well enough
+            some = power[:, :: max(1, points // 1024)]
+            noise = np.minimum(noise, np.median(some, axis=-1) / (2 * np.log(2)))
         if allowed is not None:
             power = np.where(allowed, power, -1.0)
         top = power.argmax(axis=-1)
@@ -182,6 +187,79 @@ def search(
     return Found(frequency, rate, energy)
 
 
+def strip(
+    values: Complex,
+    dwell: float,
+    least: float,
+    most: int,
+    allowed: npt.NDArray[np.bool_] | None = None,
+) -> tuple[Found, Complex]:
+    """Take the strongest line off a record, then the next, and so on.
+
+    Parameters
+    ----------
+    values : complex array, shape (points,)
+        One record.
+    dwell : float
+        Time between points, s.
+    least : float
+        Energy at which to stop.
+    most : int
+        How many lines to take off at most.
+    allowed : bool array, shape (points,), optional
+        As in `search`.
+
+    Returns
+    -------
+    Found
+        The lines in the order found; good enough to start from, and to choose among.
+    rest : complex array, shape (points,)
+        What is left.
+
+    Notes
+    -----
+    After each new line the earlier ones are fitted again, each to the record less all others (Li
+    and Stoica, IEEE Trans. Signal Process. 44, 281 (1996), from memory), so that a first fit that
+    lay between two lines moves to one of them.
+    """
+    points = values.size
+    time = dwell * np.arange(points)
+    rest = values
+    models: list[Complex] = []
+    places: list[tuple[float, float, float]] = []
+
+    def fitted(record: Complex, frequency: float, rate: float) -> tuple[Complex, float, float]:
+        """The one line of a record, its frequency and its rate."""
+        half = int(half_band(np.array([rate]), points, dwell)[0])
+        band = band_around(np.array([frequency]), half, points, dwell)
+        spectrum = scipy.fft.fft(record)[band.index]
+        fit = fit_single(spectrum, band, np.array([2j * np.pi * frequency - rate]))
+        kappa = complex(fit.kappa[0])
+        model = fit.scale[0] * np.exp(kappa * time)
+        return model, kappa.imag / (2 * np.pi), max(-kappa.real, 0.0)
+
+    for _ in range(most):
+        found = search(rest[None], dwell, allowed=allowed)
+        if found.energy[0] < least:
+            break
+        model, frequency, rate = fitted(rest, float(found.frequency[0]), float(found.rate[0]))
+        if not np.linalg.norm(rest - model) < np.linalg.norm(rest):
+            break
+        rest = rest - model
+        models.append(model)
+        places.append((frequency, rate, float(found.energy[0])))
+        for earlier in range(len(models) - 1):
+            frequency, rate, energy = places[earlier]
+            alone = rest + models[earlier]
+            model, frequency, rate = fitted(alone, frequency, max(rate, 1 / (points * dwell)))
+            if np.linalg.norm(alone - model) < np.linalg.norm(rest):
+                rest = alone - model
+                models[earlier] = model
+                places[earlier] = frequency, rate, energy
+    frequency_found, rate_found, energy_found = np.array(places).reshape(-1, 3).T
+    return Found(frequency_found, rate_found, energy_found), rest
+
+
 # --- one Lorentzian line, many records at once ---------------------------------------------------
 
 
@@ -192,7 +270,7 @@ class SingleFit:
     `variance` is of each part of kappa, `variance_log` of each part of log c, `covariance` between
     log c and kappa (complex), all for unit noise: multiply by noise^2. `noise` is the standard
     deviation of each part of a transform point. `gaussian` (test for a Gaussian part), `other`
-    (largest residual power) and `slope` (background) are what the residual says against the model,
+    (largest residual power) and `background` are what the residual says against the model,
     in units of twice the log-likelihood.
     """
 
@@ -367,6 +445,11 @@ class Crowd:
     criterion: float
 
 
+def reach_of(rate: float, resolution: float) -> float:
+    """How far a joint fit may move a line from its start, Hz."""
+    return float(2 * (abs(rate) + resolution) / np.pi + resolution)
+
+
 def fit_crowd(
     values: npt.NDArray[Any],
     shapes: Shapes,
@@ -432,7 +515,7 @@ def fit_crowd(
     scale = np.repeat(np.abs(full[1 : 2 * lines : 2]) + resolution, 2)
     low, high = np.full(free.size, -np.inf), np.full(free.size, np.inf)
     # a line stays in reach of its start, lest it run over to a stronger neighbour
-    reach = 2 * scale[: 2 * lines : 2] / np.pi + resolution
+    reach = np.array([reach_of(one, resolution) for one in rate])
     low[0 : 2 * lines : 2] = frequency - reach
     high[0 : 2 * lines : 2] = frequency + reach
     # a line may come out as slightly growing where it hardly decays; not more
@@ -544,7 +627,7 @@ def voigt_width(rate: float, gaussian: float) -> tuple[float, float, float]:
     from scipy.optimize import brentq
     from scipy.special import wofz
 
-    if gaussian <= 0:
+    if gaussian <= 1e-12 * rate**2:  # below this the Faddeeva function tells no difference
         return rate / np.pi, 1 / np.pi, 0.0
     spread = np.sqrt(2 * gaussian)  # standard deviation of the line, rad/s
     ratio = rate / (spread * np.sqrt(2))
