@@ -80,12 +80,30 @@ def test_high_order_is_well_conditioned():
     assert np.abs(flat.values).max() < DOUBLE * 20
 
 
+def test_error_names_no_record_that_a_chain_would_count_otherwise():
+    # blocks of a chain count their own records, so that a number would be that within a block
+    values = np.ones((40, 64)) + 0j
+    values[37] = np.where(np.arange(64) % 2, 1.0, 0.0) * (1 + np.arange(64.0)) ** 3
+    spectrum = fk.spectrum_from_array(
+        values, frequency=np.arange(-32, 32.0), carrier_frequency=1e6, dims=["shot"]
+    )
+    with pytest.raises(fk.FidkitError, match=r"order 4 in every record; \d+ of 64 are left in one"):
+        fk.correct_baseline(spectrum, order=4, threshold=2.0)
+
+
+def test_records_that_dask_holds_come_out_the_same():
+    plain, _ = spectra(30, records=2)
+    chunked = fk.correct_baseline(plain.chunk({"shot": 1, "frequency": 1000}))
+    np.testing.assert_array_equal(chunked.values, fk.correct_baseline(plain).values)
+
+
 def test_too_little_without_signal():
     spectrum = fk.fourier_transform(
         fk.from_array(np.exp(-0.5 * np.arange(16)) + 0j, dwell_time=1e-3, carrier_frequency=1e8)
     )
     with pytest.raises(
-        fk.FidkitError, match=r"12 points without signal are wanted for order 2; 5 of 16 are left"
+        fk.FidkitError,
+        match=r"12 points without signal are wanted for order 2 in every record; 5 of 16 are left in one",
     ):
         fk.correct_baseline(spectrum, order=2, region=(-300.0, 400.0))
     with pytest.raises(fk.FidkitError, match="at least one point of the frequency axis"):

@@ -69,22 +69,19 @@ def correct_baseline(
     if region is not None:
         quiet[signals.points_in(spectrum["frequency"], *region, "correct_baseline: region")] = False
     for number, record in enumerate(records):
-        where = f" in record {number}" if len(records) > 1 else ""
         if region is None:
-            baselines[number] = _found(record, basis, threshold, where)
+            baselines[number] = _found(record, basis, threshold)
         else:
-            baselines[number] = _through(record, basis, quiet, where)
+            baselines[number] = _through(record, basis, quiet)
     return spectrum.copy(data=(records - baselines).reshape(spectrum.shape))
 
 
-def _found(
-    record: npt.NDArray[Any], basis: npt.NDArray[Any], threshold: float, where: str
-) -> npt.NDArray[Any]:
+def _found(record: npt.NDArray[Any], basis: npt.NDArray[Any], threshold: float) -> npt.NDArray[Any]:
     """The baseline of one record, the points with signal found by repetition."""
     middle = math.sqrt(2 * math.log(2)) if np.iscomplexobj(record) else 0.6744897501960817
     quiet = np.ones(record.size, bool)
     for _ in range(ROUNDS):
-        baseline = _through(record, basis, quiet, where)
+        baseline = _through(record, basis, quiet)
         left = np.abs(record - baseline)
         noise = float(np.median(left[quiet])) / middle
         signal = left > threshold * noise
@@ -96,18 +93,16 @@ def _found(
 
 
 def _through(
-    record: npt.NDArray[Any],
-    basis: npt.NDArray[Any],
-    quiet: npt.NDArray[np.bool_],
-    where: str,
+    record: npt.NDArray[Any], basis: npt.NDArray[Any], quiet: npt.NDArray[np.bool_]
 ) -> npt.NDArray[Any]:
     """The least-squares polynomial through the quiet points of one record."""
     wanted = POINTS_PER_COEFFICIENT * basis.shape[1]
     if quiet.sum() < wanted:
         raise FidkitError(
+            # a record's number is not known here: a chain may have split the records
             f"correct_baseline: {wanted} points without signal are wanted for order "
-            f"{basis.shape[1] - 1}{where}; {quiet.sum()} of {quiet.size} are left; lower the order, "
-            "raise the threshold, or give the region that holds the signal"
+            f"{basis.shape[1] - 1} in every record; {quiet.sum()} of {quiet.size} are left in one; "
+            "lower the order, raise the threshold, or give the region that holds the signal"
         )
     coefficients, *_ = np.linalg.lstsq(basis[quiet].astype(record.dtype), record[quiet])
     return basis @ coefficients  # type: ignore[no-any-return]
