@@ -77,6 +77,22 @@ def test_values_just_outside_are_refused(spec: Step) -> None:
 
 
 @pytest.mark.parametrize("spec", HERE, ids=lambda spec: spec.name)
+def test_coordinates_along_the_dimension_go(spec: Step) -> None:
+    fid = record(spec)
+    gone = fid.dims[0]
+    both = ((gone, "pulse_width"), np.arange(6.0).reshape(3, 2))
+    fid = fid.assign_coords(both=both, kept=("pulse_width", [1, 2]), room=21.0)
+    assert set(spec.function(fid).coords) == {"time", "pulse_width", "kept", "room"}
+
+
+@pytest.mark.parametrize("spec", HERE, ids=lambda spec: spec.name)
+def test_records_that_dask_holds_come_out_the_same(spec: Step) -> None:
+    fid = record(spec)
+    chunked = spec.function(fid.chunk({fid.dims[0]: 1, "time": 100}))
+    assert np.array_equal(chunked.values, spec.function(fid).values)
+
+
+@pytest.mark.parametrize("spec", HERE, ids=lambda spec: spec.name)
 def test_facts_precision_and_input_are_kept(spec: Step) -> None:
     fid = record(spec, single=True)
     before = fid.copy(deep=True)

@@ -10,7 +10,8 @@ import scipy.fft
 import xarray as xr
 
 from fidkit import signals
-from fidkit.params import FidkitError, ParameterError, Range, Slider, Together, Unit, step
+from fidkit.params import FidkitError, ParameterError, Together, step
+from fidkit.steps.common import Tail
 
 
 @step
@@ -72,7 +73,7 @@ def average_shots(
         # summed in double precision: rounding would grow with the number of shots
         wide = np.complex128 if np.iscomplexobj(values) else np.float64
         mean = values.mean(axis=0, dtype=wide).astype(values.dtype)
-    return signal.isel(shot=0, drop=True).copy(data=mean)
+    return _without(signal, "shot").copy(data=mean)
 
 
 @step
@@ -80,9 +81,7 @@ def combine_channels(
     fid: Annotated[xr.DataArray, Together()],
     *,
     method: Literal["whitened", "sum of squares"] = "whitened",
-    tail: Annotated[
-        float, Unit("fraction"), Range(0, 1, above=True), Slider(0.02, 0.5, 0.01)
-    ] = 0.1,
+    tail: Tail = 0.1,
 ) -> xr.DataArray:
     """Combine the receiver channels of a coil array, dimension ``channel``, to one signal.
 
@@ -110,7 +109,7 @@ def combine_channels(
     Notes
     -----
     Weights ``w = inverse(P) b`` with the noise covariance P and the signal b of each channel
-    (Roemer et al., Magn. Reson. Med. 16, 192 (1990)). b is the first singular vector of the
+    (Roemer et al., Magn. Reson. Med. 16, 192 (1990), from memory). b is the first singular vector of the
     whitened record before the tail. The result is ``w^H x / w^H b`` times b of the channel that is
     strongest; P and b are taken over all other leading dimensions together, as the coils are the
     same. Lines that still stand out in the spectrum of the tail are cut out of the noise: the
@@ -124,7 +123,7 @@ def combine_channels(
     else:
         weights = _best_weights(values, signals.acquired_points(fid), tail, where)
         combined = np.tensordot(weights.astype(values.dtype), values, axes=1)
-    return fid.isel(channel=0, drop=True).copy(data=combined)
+    return _without(fid, "channel").copy(data=combined)
 
 
 def _require(signal: xr.DataArray, dimension: str, where: str) -> None:
@@ -134,6 +133,12 @@ def _require(signal: xr.DataArray, dimension: str, where: str) -> None:
             f"{where}: the signal must have a dimension {dimension}; got {got}; leave the step out, "
             f"or name the dimension with .rename or in from_array(dims=...)"
         )
+
+
+def _without(signal: xr.DataArray, dimension: str) -> xr.DataArray:
+    """The signal less a dimension, and less every coordinate that runs along it."""
+    along = [name for name, value in signal.coords.items() if dimension in value.dims]
+    return signal.drop_vars(along).isel({dimension: 0})
 
 
 def _aligned(

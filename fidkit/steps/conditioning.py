@@ -12,8 +12,8 @@ import xarray as xr
 
 from fidkit import signals
 from fidkit.params import FidkitError, ParameterError, Range, Slider, Together, Unit, step
+from fidkit.steps.common import Tail, require_no_filter_delay
 
-Tail = Annotated[float, Unit("fraction"), Range(0, 1, above=True), Slider(0.01, 0.5, 0.01)]
 Duration = Annotated[float | None, Unit("s"), Range(0), Slider(0, 0.01, 0.00001)]
 Points = Annotated[int | None, Range(0, 2**31), Slider(0, 256, 1)]
 
@@ -108,7 +108,7 @@ def remove_start(
     FidkitError
         If a filter delay that the file states was not removed first.
     """
-    _without_filter_delay(fid, "remove_start")
+    require_no_filter_delay(fid, "remove_start")
     return _cut(fid, _count(fid, duration, points, "remove_start", "duration", "points"), None)
 
 
@@ -263,7 +263,7 @@ def rebuild_start(
     number.
     """
     where = "rebuild_start"
-    _without_filter_delay(fid, where)
+    require_no_filter_delay(fid, where)
     dwell, start = signals.dwell_time(fid), signals.time_start(fid)
     measured = signals.acquired_points(fid)
     if points is None:
@@ -297,14 +297,7 @@ def rebuild_start(
         for place in range(points - 1, -1, -1):
             work[place] = prediction @ work[place + 1 : place + 1 + coefficients]
         values[row][:points] = work[:points]
-    result = signals.fid_array(
-        values,
-        dwell=dwell,
-        start=start - points * dwell,
-        dims=fid.dims[:-1],  # type: ignore[arg-type]
-        coords=fid.coords,  # type: ignore[arg-type]
-        attributes=fid.attrs,
-    )
+    result = signals.like(fid, values, dwell=dwell, start=start - points * dwell)
     if "acquired_points" in fid.attrs:
         result.attrs["acquired_points"] = measured + points
     return result
@@ -445,16 +438,6 @@ def _tail_points(tail: float, measured: int, where: str) -> int:
     return count
 
 
-def _without_filter_delay(fid: xr.DataArray, where: str) -> None:
-    """Raise where the record's own delay would no longer fit once its start is changed."""
-    if fid.attrs.get("filter_delay", 0) > 0:
-        raise FidkitError(
-            f"{where}: the record must start with the signal; got one that a digital filter delays "
-            f"by {fid.attrs['filter_delay']:g} points (attribute filter_delay); apply "
-            "remove_filter_delay first"
-        )
-
-
 def _count(
     fid: xr.DataArray,
     duration: float | None,
@@ -538,8 +521,9 @@ def _find_delay(fid: xr.DataArray) -> tuple[float, float]:
     values = fid.values[..., : signals.acquired_points(fid)].reshape(
         -1, signals.acquired_points(fid)
     )
-    energy = np.sum(np.abs(values) ** 2, axis=-1, dtype=np.float64)
+    energy: npt.NDArray[np.float64] = np.sum(np.abs(values) ** 2, axis=-1, dtype=np.float64)
     chosen = np.argsort(-energy, kind="stable")[:DELAY_RECORDS]
+    chosen = chosen[np.isfinite(energy[chosen])]
     answers = [_delay_of(values[row].astype(np.complex128)) for row in chosen]
     found = [answer for answer in answers if answer is not None]
     if not found:

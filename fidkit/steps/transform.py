@@ -11,6 +11,7 @@ import xarray as xr
 
 from fidkit import signals
 from fidkit.params import FidkitError, Gives, Range, Slider, step
+from fidkit.steps.common import zeros
 
 #: How far a frequency axis may be off the transform's own grid by rounding, in points.
 GRID_ROUNDING = 1e-3
@@ -40,7 +41,7 @@ def zero_fill(
     Raises
     ------
     FidkitError
-        If both are given, or the record would get shorter.
+        If both are given, or the record would get shorter, or too long for the memory.
     """
     length = fid.sizes["time"]
     if factor is not None and points is not None:
@@ -54,16 +55,10 @@ def zero_fill(
             f"zero_fill: points must be at least the {length} the record has; got {points}; "
             "remove_end shortens a record"
         )
-    values = np.zeros((*fid.shape[:-1], points), dtype=fid.dtype)
+    values = zeros((*fid.shape[:-1], points), fid.dtype, "zero_fill")
     values[..., :length] = fid.values
-    result = signals.fid_array(
-        values,
-        dwell=signals.dwell_time(fid),
-        start=signals.time_start(fid),
-        dims=fid.dims[:-1],  # type: ignore[arg-type]
-        coords=fid.coords,  # type: ignore[arg-type]
-        attributes=fid.attrs,
-    )
+    dwell, start = signals.dwell_time(fid), signals.time_start(fid)
+    result = signals.like(fid, values, dwell=dwell, start=start)
     result.attrs["acquired_points"] = signals.acquired_points(fid)
     return result
 
@@ -84,7 +79,8 @@ def fourier_transform(
     Returns
     -------
     xarray.DataArray
-        Spectrum in unit of the signal per Hz, frequency ascending.
+        Spectrum in unit of the signal per Hz, frequency ascending. A filter delay that the file
+        states and that was not removed first is named in the notes.
 
     Raises
     ------
@@ -108,19 +104,20 @@ def fourier_transform(
     spectrum = scipy.fft.fftshift(scipy.fft.fft(values, axis=-1), axes=-1)
     factor = dwell * np.exp(-2j * np.pi * frequency * start) if start else np.float64(dwell)
     spectrum *= factor.astype(spectrum.dtype if start else spectrum.real.dtype)
-    result = signals.spectrum_array(
-        spectrum,
-        frequency=frequency,
-        dims=fid.dims[:-1],  # type: ignore[arg-type]
-        coords=fid.coords,  # type: ignore[arg-type]
-        attributes=fid.attrs,
-    )
+    result = signals.like(fid, spectrum, frequency=frequency)
     result.attrs |= {
         "units": _per(str(fid.attrs.get("units", "1")), "s-1", "s"),
         "time_start": start,
         "first_point": first_point,
         "acquired_points": signals.acquired_points(fid),
     }
+    if fid.attrs.get("filter_delay", 0) > 0:
+        signals.add_note(
+            result,
+            f"fourier_transform: the delay of {fid.attrs['filter_delay']:g} points that a digital "
+            "filter put before the signal is still in the phase, 360 degrees over the spectral width "
+            "for each point; apply remove_filter_delay before",
+        )
     return result
 
 
@@ -132,7 +129,8 @@ def inverse_transform(spectrum: xr.DataArray) -> Annotated[xr.DataArray, Gives("
     -------
     xarray.DataArray
         The FID on its true times; zeros that were filled in are still there. Phase that was applied
-        to the spectrum is in its values, and no longer booked.
+        to the spectrum is in its values, and no longer booked. Where the time of the first point
+        is not known, as of a spectrum read from a file, it is 0 s and the notes say so.
 
     Raises
     ------
@@ -160,15 +158,14 @@ def inverse_transform(spectrum: xr.DataArray) -> Annotated[xr.DataArray, Gives("
         fid[..., 0] *= 2
     # the phase that was applied is in the data now
     kept = spectrum.drop_vars(["applied_phase", "applied_delay"], errors="ignore")
-    result = signals.fid_array(
-        fid,
-        dwell=1 / width,
-        start=start,
-        dims=spectrum.dims[:-1],  # type: ignore[arg-type]
-        coords=kept.coords,  # type: ignore[arg-type]
-        attributes=spectrum.attrs,
-    )
+    result = signals.like(kept, fid, dwell=1 / width, start=start)
     result.attrs["units"] = _per(str(spectrum.attrs.get("units", "1")), "s", "s-1")
+    if "time_start" not in spectrum.attrs:
+        signals.add_note(
+            result,
+            "inverse_transform: the time of the first point is not known for this spectrum; taken "
+            "as 0 s",
+        )
     return result
 
 
