@@ -96,6 +96,34 @@ def test_one_line_in_noise(method, noise, spread):
     assert (found.applied_delay == 0).all()
 
 
+@pytest.mark.parametrize("factor", [1, 1.5, 2, 4])
+@pytest.mark.parametrize("decays", [1, 2, 3])
+def test_one_line_that_the_end_of_the_record_cuts(decays, factor):
+    # By construction: one line at any frequency and phase, the record as long as so many T2*
+    random = np.random.default_rng(decays)
+    dwell, points = 1e-3, 1024
+    time = dwell * np.arange(points)
+    frequency, phase = random.uniform(-400, 400, 20), random.uniform(-180, 180, 20)
+    line = 2j * np.pi * frequency[:, None] * time - decays * np.arange(points) / points
+    data = np.exp(line + 1j * np.radians(phase[:, None]))
+    fid = fk.from_array(data, dwell_time=dwell, carrier_frequency=1e8)
+    for first_point in ("full", "half"):
+        spectrum = fk.fourier_transform(fk.zero_fill(fid, factor=factor), first_point=first_point)
+        found = fk.auto_phase(spectrum)
+        assert found.sizes == spectrum.sizes
+        assert np.abs(left_over(found, frequency, -phase)).max() < 0.6  # degree
+
+
+@pytest.mark.parametrize("turns", [-3, 10])
+def test_phase_that_was_applied_does_not_spoil_the_finer_grid(turns):
+    # By construction: turned so, the start of the FID comes to its end, or the end to its start
+    spectrum = spectrum_of((123.4, 1.0), phase=50, points=512, rate=4.0)
+    turned = fk.correct_phase(spectrum, zero_order=20, first_order=360 * turns)
+    found = fk.auto_phase(turned)
+    # on a grid made finer as if the FID still began at its start: 0.3 and 3 degree
+    assert abs(left_over(found, 123.4, -50)) < 0.1
+
+
 def test_pivot_chooses_the_line_that_stands_upright():
     # By construction: the small line is turned by a further 40 degrees
     one = spectrum_of((-200.0, 1.0), phase=10)

@@ -465,3 +465,39 @@ def test_best_length_without_a_window():
     window = np.exp(-fid.time.values / t2_star)
     best = height_over_noise(fk.apodize_exponential(fid, broadening=1 / (np.pi * t2_star)), window)
     assert max(found) / best == pytest.approx(0.9025, abs=1e-4)
+
+
+def test_more_points_than_any_memory_holds():
+    # 2**31 points of 16 bytes, 4096 times: 2**47 bytes, all that a process can address
+    fid = fk.from_array(np.zeros((4096, 2), complex), dwell_time=1e-6, carrier_frequency=1e8)
+    with pytest.raises(fk.FidkitError, match=r"2147483648 points a record take 140,737.5 GB"):
+        fk.zero_fill(fid, points=2**31)
+
+
+def test_transform_says_that_the_filter_delay_is_still_there():
+    fid = record((100.0, 20.0, 1.0), points=256)
+    late = fk.fourier_transform(fid.assign_attrs(filter_delay=61.25))
+    assert "delay of 61.25 points that a digital filter" in late.attrs["notes"]
+    for plain in (fid, fid.assign_attrs(filter_delay=0.0)):
+        assert "notes" not in fk.fourier_transform(plain).attrs
+
+
+def test_way_back_says_that_the_start_is_not_known():
+    spectrum = fk.fourier_transform(record((100.0, 20.0, 1.0), points=256, time_start=2e-3))
+    assert "notes" not in fk.inverse_transform(spectrum).attrs
+    del spectrum.attrs["time_start"]
+    back = fk.inverse_transform(spectrum)
+    assert "time of the first point is not known" in back.attrs["notes"]
+    assert back["time"].values[0] == 0
+
+
+def test_records_that_dask_holds_come_out_the_same():
+    fid = record((100.0, 20.0, 1.0), points=256).expand_dims(shot=2)
+    chunked, plain = fid.chunk({"shot": 1, "time": 100}), fid
+    for name in ("zero_fill", "fourier_transform", "auto_phase", "correct_phase"):
+        chunked, plain = getattr(fk, name)(chunked), getattr(fk, name)(plain)
+        np.testing.assert_array_equal(chunked.values, plain.values)
+        if name != "zero_fill":
+            chunked = chunked.chunk({"shot": 1, "frequency": 100})
+    again = fk.inverse_transform(chunked)
+    np.testing.assert_array_equal(again.values, fk.inverse_transform(plain).values)
