@@ -619,7 +619,7 @@ def test_malformed_input(run, tmp_path, name, content, said):
             "no",
         ),
         ("\0", "null"),
-        ("(" * 200, "nested"),
+        ("(" * 200, "not Python"),
     ],
 )
 def test_hostile_chain_file(run, tmp_path, text, said):
@@ -656,3 +656,13 @@ def test_values_that_make_no_sense(run, words, said):
     assert said in err
     assert "a fault in fidkit" not in err
     assert err.count("\n") == 1
+
+
+@pytest.mark.parametrize("command", ["measure data_demo", "info data_demo/loop_40mm_shots.nc"])
+def test_the_readme_shows_what_is_printed(command, run, monkeypatch):
+    """Every number in the README is one that the command gives today."""
+    monkeypatch.chdir(DEMO.parent)
+    shown = (DEMO.parent / "README.md").read_text().split(f"$ fidkit {command}\n")[1]
+    status, out, _ = run(*command.split())
+    assert status == 0
+    assert out == shown.split("```")[0]
