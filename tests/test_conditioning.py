@@ -469,6 +469,20 @@ def test_no_delay_is_found_where_no_filter_was(shape: Callable[[np.ndarray], np.
         fk.remove_filter_delay(make(values))
 
 
+def test_a_burst_long_after_the_signal_is_not_carried_back() -> None:
+    """Carried back over 3000 points at 0.4 a point it would overflow."""
+    time = np.arange(8192.0)
+    slow, short = (
+        np.where(time < start, 0, np.exp((0.2j - rate) * np.maximum(time - start, 0)))
+        for start, rate in ((3000, 1e-4), (6004, 0.4))
+    )
+    values = slow + short + noise(np.random.default_rng(1), 8192, 1e-4)
+    delay, _ = conditioning._find_delay(make(values))
+    assert 2999 <= delay <= 3000  # a step between two points
+    with pytest.raises(FidkitError, match="no build-up"):
+        fk.remove_filter_delay(make(values).copy(data=np.where(time == 9, np.nan, values)))
+
+
 def test_start_is_not_changed_before_the_filter_delay() -> None:
     fid = make(filtered(20.25, (0.1,), 0.004, 512), filter_delay=20.25)
     for name in ("remove_start", "rebuild_start"):

@@ -30,6 +30,8 @@ FILTER_SHAPE = 0.04
 LEAST_NOISE = 1e-3
 #: Noise, as a fraction of the height, that hides the ringing of the filter after the edge.
 HIDES_RINGING = 5e-3
+#: Half of the longest filter, in points, that is waited for: decays are carried back that far.
+LONGEST_FILTER = 256
 #: A delay known no better than this, in points, is not given.
 LARGEST_ERROR = 0.02
 #: How many points may be rebuilt: each leans on the ones after it.
@@ -553,7 +555,7 @@ def _delay_of(record: npt.NDArray[np.complex128]) -> tuple[float, float, float] 
     reach = min(rough, REACH)
     # the filter is twice as long as its delay: what follows is decays and noise alone. Only where
     # noise hides its ringing may they be looked for right behind the edge, where they are larger
-    for first in (2 * rough + 4, rough + reach):
+    for first in (rough + min(rough, LONGEST_FILTER) + 4, rough + reach):
         settled = record[first : first + 512]
         if rough < 2 or settled.size < 64:
             return None
