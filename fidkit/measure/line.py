@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
 from numbers import Real
 from typing import TYPE_CHECKING, Any
 
@@ -113,7 +112,9 @@ def measure(
         )
     if record is not None:
         method = METHOD
-        for found in in_threads(lambda block: measure_block(block, wanted), _blocks(record)):
+        for found in in_threads(
+            lambda block: measure_block(block, wanted), record.blocks(BLOCK_POINTS)
+        ):
             results += found
     else:
         method = METHOD_STANDING
@@ -196,20 +197,6 @@ def _checked(
         int(lines),
         pair(noise, "noise"),
     )
-
-
-def _blocks(record: Record) -> Iterator[Record]:
-    records, points = record.values.shape
-    # records with windows of their own are handled one by one: each has its own noise
-    size = 1 if record.weight.ndim == 2 else max(1, BLOCK_POINTS // points)
-    for first in range(0, records, size):
-        rows = slice(first, first + size)
-        yield Record(
-            record.values[rows],
-            record.weight if record.weight.ndim == 1 else record.weight[first],
-            record.start,
-            record.dwell,
-        )
 
 
 def _dataset(

@@ -7,6 +7,7 @@ noise, is recovered from a finished spectrum, and apodization and truncation nee
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
 
@@ -40,7 +41,7 @@ class Record:
     """Records behind a signal, of shape (records, points), and how the signal weights them.
 
     `weight` has the shape (points,) where it is the same for all, else (records, points); it
-    belongs to the signal as it stands, and `values` are free of it.
+    belongs to the signal as it stands. `blocks` gives the records free of it.
     """
 
     values: npt.NDArray[Any]
@@ -48,10 +49,22 @@ class Record:
     start: float
     dwell: float
 
+    def blocks(self, most: int) -> Iterator[Record]:
+        """Pieces of at most so many points (but one record), in double precision, weights divided out.
+
+        Records with weights of their own come one by one: each has its own noise.
+        """
+        records, points = self.values.shape
+        size = 1 if self.weight.ndim == 2 else max(1, most // points)
+        for first in range(0, records, size):
+            weight = self.weight if self.weight.ndim == 1 else self.weight[first]
+            values = self.values[first : first + size].astype(np.complex128) / weight
+            yield Record(values, weight, self.start, self.dwell)
+
 
 def record_as_it_stands(fid: xr.DataArray) -> Record:
     """The points of an FID whose history does not lead back: nothing is divided out."""
-    values = fid.values.reshape(-1, fid.shape[-1]).astype(np.complex128)
+    values = fid.values.reshape(-1, fid.shape[-1])
     return Record(values, np.ones(fid.shape[-1]), signals.time_start(fid), signals.dwell_time(fid))
 
 
@@ -113,7 +126,7 @@ def record_of(signal: xr.DataArray) -> Record:
     length = int((~kept[first:]).argmax()) or measured - first
     part = slice(first, first + length)
     return Record(
-        values=values[:, part].astype(np.complex128) / weight[..., part],
+        values=values[:, part],
         weight=weight[..., part],
         start=start + first * dwell,
         dwell=dwell,
