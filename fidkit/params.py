@@ -278,7 +278,13 @@ def step(function: Function) -> Function:
         arguments = spec.check(given)
         for name, value in arguments.items():
             spec.parameters[name].check_along(value, signal, spec.name)
-        result = function(signal, **arguments)
+        try:
+            result = function(signal, **arguments)
+        except MemoryError as error:
+            raise FidkitError(
+                f"{spec.name}: the computer has not enough memory for this ({error or 'no details'}); "
+                "take fewer points or fewer records at a time"
+            ) from None
         if result is signal:
             result = result.copy(deep=False)
         before = signal.attrs.get("history", "")

@@ -16,6 +16,8 @@ history               the steps taken, one replayable line each
 acquired_points       how many points are measured, where zeros follow them
 time_start            (spectra) time of the first point, s, for the way back
 first_point           (spectra) how the first point counted: ``full`` or ``half``
+spectral_width        (spectra) of the whole spectrum, of which this may be a part, Hz
+measured_from         time of the first measured point where rebuilt ones come before it, s
 ===================== ==============================================================
 """
 
@@ -43,6 +45,7 @@ __all__ = [
     "from_array",
     "is_fid",
     "like",
+    "points_before",
     "points_in",
     "require_complex",
     "spectral_width",
@@ -59,7 +62,8 @@ EVEN_SPACING = 1e-4
 
 LEADING = {1: (), 2: ("shot",), 3: ("channel", "shot")}
 
-SIGNAL_ATTRIBUTES = ("time_start", "first_point", "acquired_points")
+SPECTRUM_ATTRIBUTES = ("time_start", "first_point", "spectral_width")
+SIGNAL_ATTRIBUTES = (*SPECTRUM_ATTRIBUTES, "acquired_points", "measured_from")
 
 
 def from_array(
@@ -203,9 +207,7 @@ def fid_array(
     attributes: Mapping[str, Any],
 ) -> xr.DataArray:
     """Put values, axis and attributes together to an FID (for readers and steps)."""
-    kept = {
-        key: value for key, value in attributes.items() if key not in ("time_start", "first_point")
-    }
+    kept = {key: value for key, value in attributes.items() if key not in SPECTRUM_ATTRIBUTES}
     kept["long_name"] = "signal"
     if kept.get("acquired_points", 0) > values.shape[-1]:
         del kept["acquired_points"]  # of a longer record than what is left
@@ -386,6 +388,11 @@ def spectral_width(spectrum: xr.DataArray) -> float:
     """Points times spacing of the frequency axis, Hz: one over the dwell time."""
     axis = spectrum["frequency"].values
     return float((axis[-1] - axis[0]) / (axis.size - 1) * axis.size)
+
+
+def points_before(fid: xr.DataArray, time: float) -> int:
+    """How many points of an FID come before a time, s; rounding does not count."""
+    return int(np.searchsorted(fid["time"].values, time - 0.01 * dwell_time(fid)))
 
 
 def acquired_points(signal: xr.DataArray) -> int:

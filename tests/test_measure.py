@@ -582,3 +582,54 @@ def test_names_that_results_need():
     assert fk.measure(lines).linewidth.dims == ("line",)
     with pytest.raises(fk.FidkitError, match="line is the name of a result"):
         fk.measure(lines, lines=2)
+
+
+def test_a_baseline_that_was_taken_away_is_put_back():
+    """Source: the record is the same, so every number is; only rounding is between them."""
+    values = np.stack([line(100, 5, phase=0.4), line(-300, 8)]) + noise(1e-3, 70, (2, POINTS))
+    fid = record(values, dims=("channel",))
+    plain = fk.measure(fid)
+    for window in ("apodize_exponential", "apodize_trapezoid"):
+        chain = fk.Chain(
+            [
+                window,
+                fk.Call("zero_fill", factor=2),
+                "fourier_transform",
+                "auto_phase",
+                fk.Call("correct_baseline", order=3),
+                fk.Call("correct_phase", zero_order=7.0),
+                fk.Call("correct_baseline", order=1),
+            ]
+        )
+        found = fk.measure(chain(fid))
+        for name in ("frequency_offset", "linewidth", "amplitude", "phase"):
+            apart = np.abs(found[name] - plain[name]) / plain[f"{name}_std"]
+            assert float(apart.max()) < 0.5, name
+            ratio = found[f"{name}_std"] / plain[f"{name}_std"]
+            assert float(abs(ratio - 1).max()) < 0.1, name
+        back = fk.inverse_transform(chain(fid))
+        assert "as it stands" in str(fk.measure(back).status.values[0])
+        assert "as it stands" in str(fk.measure(chain(fid).drop_vars("baseline")).status.values[0])
+
+
+def test_predicted_points_are_no_measurement():
+    """Source: definition of a standard uncertainty; binomial counting error of 150 records."""
+    time = TIME[:2048] + 2e-3
+    values = line(100, 6, time=time) + noise(0.05, 71, (150, 2048))
+    fid = record(values, time_start=2e-3)
+    plain, rebuilt = fk.measure(fid), fk.measure(fk.rebuild_start(fid))
+    for name in ("frequency_offset", "linewidth", "amplitude"):
+        ratio = rebuilt[f"{name}_std"] / plain[f"{name}_std"]
+        assert float(abs(ratio - 1).max()) < 1e-6, name
+        assert float(abs(rebuilt[name] - plain[name]).max()) < 1e-6, name
+    spectrum = fk.fourier_transform(fk.apodize_exponential(fk.rebuild_start(fid)))
+    found = fk.measure(spectrum)
+    assert float(abs(found.linewidth / plain.linewidth - 1).max()) < 1e-6
+
+
+def test_the_middle_of_a_spectrum_is_not_the_whole():
+    """A piece that lies symmetric about the carrier is a piece."""
+    fid = record(line(100, 5) + noise(0.01, 72))
+    spectrum = fk.fourier_transform(fk.zero_fill(fid, factor=4))
+    found = fk.measure(spectrum.sel(frequency=slice(-1250, 1249.9)))
+    assert "as it stands" in str(found.status.values)

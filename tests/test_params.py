@@ -212,6 +212,16 @@ def test_wrong_kind_of_signal_names_the_remedy(fid):
         fk.apodize_exponential(fid, 1.0)
 
 
+def test_too_little_memory_is_said(fid):
+    @step
+    def fill_memory(fid: xr.DataArray) -> xr.DataArray:
+        """Ask for more than there is."""
+        raise MemoryError("Unable to allocate 8 EiB")
+
+    with pytest.raises(fk.FidkitError, match="fill_memory: the computer has not enough memory"):
+        fill_memory(fid)
+
+
 def test_find_step_helps():
     with pytest.raises(fk.FidkitError, match="did you mean apodize_exponential"):
         find_step("apodise_exponential")

@@ -101,6 +101,8 @@ def record_of(signal: xr.DataArray) -> Record:
         fid, half = _back(signal, calls)
     else:
         signals.require_complex(signal, "measure")
+        if any(call.step == "correct_baseline" for call in calls):
+            raise Unseen("a baseline was taken away while it was a spectrum")
     measured = signals.acquired_points(fid)
     values = fid.values[..., :measured].reshape(-1, measured)
     if signal is fid:
@@ -115,6 +117,8 @@ def record_of(signal: xr.DataArray) -> Record:
         weight[..., 0] *= 0.5
         values = values.copy()
         values[..., 0] *= 0.5
+    predicted = signals.points_before(fid, float(signal.attrs.get("measured_from", -np.inf)))
+    weight[..., :predicted] = 0.0
     strength = np.abs(weight).reshape(-1, measured)
     enough = strength >= SMALLEST_WEIGHT[values.real.dtype.itemsize * 2] * strength.max(
         -1, keepdims=True
@@ -158,10 +162,19 @@ def _back(spectrum: xr.DataArray, calls: tuple[Call, ...]) -> tuple[xr.DataArray
             raise Unseen(f"the step {name} after the transform cannot be undone")
     frequency = spectrum["frequency"].values
     points = frequency.size
-    expected = -(points // 2) * signals.spectral_width(spectrum) / points
-    tolerance = 0.01 * signals.spectral_width(spectrum) / points
-    if points < signals.acquired_points(spectrum) or abs(frequency[0] - expected) > tolerance:
+    width = signals.spectral_width(spectrum)
+    whole = float(spectrum.attrs.get("spectral_width", 0.0))
+    # both ends where the transform put them, to a hundredth of a point
+    tolerance = 0.01 * width / points
+    if (
+        abs(whole - width) > tolerance
+        or abs(frequency[0] + points // 2 * width / points) > tolerance
+    ):
         raise Unseen("it is only a part of the spectrum that was made")
+    if "correct_baseline" in names[last + 1 :]:
+        if "baseline" not in spectrum.coords:
+            raise Unseen("what correct_baseline took away is no longer kept with it")
+        spectrum = spectrum.copy(data=spectrum.values + spectrum["baseline"].values)
     if "applied_phase" in spectrum.coords:
         turn = spectrum["applied_phase"] + spectrum["applied_delay"] * spectrum["frequency"]
         phasor = np.exp(-1j * np.deg2rad(_aligned(turn, spectrum)))

@@ -572,7 +572,7 @@ def fit_crowd(
     jacobian[:, theta.size :] = basis
     norm = np.linalg.norm(jacobian, axis=0)
     # what is held, and an imaginary background in a real spectrum, is no parameter
-    used = norm > 0
+    used = norm > 1e-100
     count = int(used.sum())
     norm[~used] = 1.0
     power = max(float(residual @ residual), (1e-12 * size) ** 2)

@@ -45,7 +45,8 @@ def correct_baseline(
     Returns
     -------
     xarray.DataArray
-        The spectrum without its baseline, real and imaginary part each corrected.
+        The spectrum without its baseline, real and imaginary part each corrected. What was taken away is in the coordinate
+        ``baseline``, so that `fidkit.measure` can put it back.
 
     Raises
     ------
@@ -73,7 +74,12 @@ def correct_baseline(
             baselines[number] = _found(record, basis, threshold)
         else:
             baselines[number] = _through(record, basis, quiet)
-    return spectrum.copy(data=(records - baselines).reshape(spectrum.shape))
+    result = spectrum.copy(data=(records - baselines).reshape(spectrum.shape))
+    taken = xr.Variable(spectrum.dims, baselines.reshape(spectrum.shape))
+    if "baseline" in spectrum.coords:
+        taken = taken + spectrum["baseline"].variable
+    taken.attrs = {"units": spectrum.attrs.get("units", "1"), "long_name": "baseline taken away"}
+    return result.assign_coords(baseline=taken)
 
 
 def _found(record: npt.NDArray[Any], basis: npt.NDArray[Any], threshold: float) -> npt.NDArray[Any]:

@@ -302,6 +302,8 @@ def rebuild_start(
     result = signals.like(fid, values, dwell=dwell, start=start - points * dwell)
     if "acquired_points" in fid.attrs:
         result.attrs["acquired_points"] = measured + points
+    # what is predicted brings no knowledge: measuring begins where the record did
+    result.attrs.setdefault("measured_from", start)
     return result
 
 

@@ -310,8 +310,11 @@ def _turned(
     angle = np.asarray(phase)[..., None] + np.asarray(slope)[..., None] * (
         spectrum["frequency"].values
     )
-    values = spectrum.values * np.exp(1j * np.radians(angle)).astype(spectrum.dtype)
-    result = spectrum.copy(data=values)
+    turn = np.exp(1j * np.radians(angle)).astype(spectrum.dtype)
+    result = spectrum.copy(data=spectrum.values * turn)
+    if "baseline" in spectrum.coords:  # what correct_baseline took away turns with the rest
+        taken = spectrum["baseline"].variable
+        result = result.assign_coords(baseline=taken.copy(data=taken.values * turn))
     for name, added, units, text in (
         ("applied_phase", phase, "degree", "phase applied so far, at the carrier"),
         ("applied_delay", slope, "degree/Hz", "slope of the phase applied so far"),

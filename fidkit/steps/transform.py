@@ -109,6 +109,7 @@ def fourier_transform(
         "units": _per(str(fid.attrs.get("units", "1")), "s-1", "s"),
         "time_start": start,
         "first_point": first_point,
+        "spectral_width": 1 / dwell,
         "acquired_points": signals.acquired_points(fid),
     }
     if fid.attrs.get("filter_delay", 0) > 0:
