@@ -145,7 +145,8 @@ def _checked(
 ) -> Wanted:
     signals.check_signal(signal, "measure")
     in_time = signals.is_fid(signal)
-    taken = set(QUANTITIES) | {"lineshape", "status"} | ({"line"} if lines != 1 else set())
+    taken = {f"{name}{end}" for name in QUANTITIES for end in ("", "_std", "_status")}
+    taken |= {"lineshape", "status"} | ({"line"} if lines != 1 else set())
     clash = sorted(taken & {str(name) for name in (*signal.dims, *signal.coords)})
     if clash:
         raise FidkitError(

@@ -572,19 +572,22 @@ def fit_crowd(
     jacobian[:, theta.size :] = basis
     norm = np.linalg.norm(jacobian, axis=0)
     # what is held, and an imaginary background in a real spectrum, is no parameter
-    used = norm > 1e-100
+    used = norm > 0
     count = int(used.sum())
     norm[~used] = 1.0
     power = max(float(residual @ residual), (1e-12 * size) ** 2)
     noise = float(np.sqrt(power / max(data.size - count, 1)))
     inverse = np.linalg.pinv((jacobian / norm).T @ (jacobian / norm), rcond=1e-14, hermitian=True)
+    with np.errstate(over="ignore", invalid="ignore"):
+        # a line that fades out of a fit has no uncertainty that could be written down
+        covariance = noise**2 * inverse / np.outer(norm, norm)
     return Crowd(
         frequency=theta[0 : 2 * lines : 2],
         rate=theta[1 : 2 * lines : 2],
         gaussian=float(theta[-1]) if gaussian is not None else 0.0,
         scale=linear[0 : 2 * lines : 2] + 1j * linear[1 : 2 * lines : 2],
         linear=linear[0::2] + 1j * linear[1::2],
-        covariance=noise**2 * inverse / np.outer(norm, norm),
+        covariance=covariance,
         noise=noise,
         residual=residual[: values.size] + 1j * residual[values.size :]
         if is_complex
