@@ -695,3 +695,7 @@ def _reason(error: BaseException) -> str:
         f"a fault in fidkit or a library, {type(error).__name__} in {Path(last.filename).name} line "
         f"{last.lineno}: {text}; please report it with the file"
     )
+
+
+if __name__ == "__main__":
+    sys.exit(main())

@@ -443,6 +443,15 @@ def test_version_and_usage(capsys):
     assert caught.value.code == 2
 
 
+@pytest.mark.parametrize("module", ["fidkit", "fidkit.cli"])
+def test_as_a_module(module):
+    words = [sys.executable, "-m", module]
+    done = subprocess.run([*words, "--version"], capture_output=True, text=True, check=False)
+    assert (done.returncode, done.stdout) == (0, f"fidkit {fk.__version__}\n")
+    done = subprocess.run([*words, "info", "none.dx"], capture_output=True, text=True, check=False)
+    assert (done.returncode, done.stdout) == (1, "")
+
+
 def test_as_a_process(tmp_path, folder):
     """The installed command, without a terminal, in a locale that knows no micro sign."""
     environment = {**os.environ, "LC_ALL": "C", "PYTHONCOERCECLOCALE": "0", "PYTHONUTF8": "0"}
@@ -470,7 +479,7 @@ def test_as_a_process(tmp_path, folder):
 # the demo -------------------------------------------------------------------------------------
 
 
-def test_demo_is_made_again_byte_for_byte(tmp_path):
+def test_demo_is_made_again(tmp_path):
     for name in ("one", "two"):
         (tmp_path / name).mkdir()
         subprocess.run(
@@ -483,8 +492,9 @@ def test_demo_is_made_again_byte_for_byte(tmp_path):
     assert made == kept
     for name in made:
         again = (tmp_path / "one" / name).read_bytes()
-        # netCDF: older HDF5 libraries put the time of writing into the container
-        if name.endswith(".nc"):
+        # containers differ: older HDF5 libraries put the time of writing into theirs, and zipfile of
+        # older Pythons another version
+        if name.endswith((".nc", ".npz")):
             for other in (DEMO / name, tmp_path / "two" / name):
                 assert fk.read(other).identical(fk.read(tmp_path / "one" / name))
         else:

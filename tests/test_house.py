@@ -38,6 +38,7 @@ FLOORS = {
     "workbench": 5,
     "the whole package": 4.5,
     "cli": 5,
+    "__main__": 6,
 }
 #: Within one floor: which room may look into which.
 SAME_FLOOR = {("steps", "numerics"), ("signals", "nuclei"), ("signals", "params")}
