@@ -415,6 +415,8 @@ def _parsed(text: str, refuse: Callable[..., FidkitError]) -> tuple[list[ast.stm
     """The statements of a text that is short and flat enough, and the title above them."""
     if len(text) > LARGEST_TEXT:
         raise refuse(f"longer than {LARGEST_TEXT} characters")
+    if "\0" in text:
+        raise refuse("holds a null character")
     try:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")  # odd escapes in a hostile text are none of ours

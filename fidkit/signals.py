@@ -133,11 +133,10 @@ def from_array(
     )
     check_signal(fid, "from_array")
     carrier = float(attributes["carrier_frequency"])
-    if carrier * dwell < 1:
-        add_note(
-            fid,
-            f"the spectral width of {1 / dwell:g} Hz is larger than the carrier of {carrier:g} Hz: "
-            "is carrier_frequency in Hz?",
+    if 2 * carrier * dwell < 1:
+        raise FidkitError(
+            f"carrier_frequency must be more than half the spectral width of {1 / dwell:g} Hz; got "
+            f"{carrier:g} Hz; give it in Hz, not MHz, and dwell_time in s"
         )
     return fid
 

@@ -82,10 +82,14 @@ def test_the_table():
     many = fk.measure(both, lines=2)
     frame = fk.table(one, many)
     assert list(frame["source"]) == ["one.csv", "", "", "", ""]
-    assert frame["linewidth"].iloc[0] == float(one.linewidth)
+    assert frame["linewidth_hz"].iloc[0] == float(one.linewidth)
+    assert frame["frequency_offset_std_ppm"].iloc[0] == float(one.frequency_offset_ppm_std)
+    assert frame["field_tesla"].iloc[0] == float(one.field)
     assert list(frame["shot"].iloc[1:]) == [0, 0, 1, 1]
     assert frame["snr"].iloc[1] == float(many.snr[0, 0])
-    assert {f"{name}{end}" for name in QUANTITIES for end in ("", "_std", "_status")} <= set(frame)
+    assert set(frame["amplitude_unit"]) == {"1"}
+    assert {f"{name}_status" for name in QUANTITIES} <= set(frame)
+    assert len(frame.columns) == len(set(frame.columns))
     with pytest.raises(fk.FidkitError, match="at least one result"):
         fk.table()
 
@@ -633,3 +637,44 @@ def test_the_middle_of_a_spectrum_is_not_the_whole():
     spectrum = fk.fourier_transform(fk.zero_fill(fid, factor=4))
     found = fk.measure(spectrum.sel(frequency=slice(-1250, 1249.9)))
     assert "as it stands" in str(found.status.values)
+
+
+def test_an_offset_is_no_line_where_several_are_asked_for():
+    for seed in range(80, 86):
+        values = line(-412.3, 4) + line(330, 6, 0.5) + 0.025 + noise(0.01, seed)
+        found = fk.measure(record(values), lines=2)
+        near(found.isel(line=0), "frequency_offset", -412.3)
+        near(found.isel(line=1), "frequency_offset", 330.0)
+
+
+def test_one_channel_does_not_know_the_sign():
+    found = fk.measure(fk.make_analytic(record(line(-412.3, 6).real)))
+    assert "cannot tell the sign" in str(found.frequency_offset_status.values)
+    assert "cannot tell the sign" in str(found.field_status.values)
+
+
+def test_a_step_that_is_not_known_is_not_trusted(monkeypatch):
+    """A step outside the windows that weights the record would falsify the width in silence."""
+    from fidkit.params import STEPS, step
+
+    before = dict(STEPS)
+    try:
+
+        @step
+        def fade(fid: xr.DataArray) -> xr.DataArray:
+            """Fade the record out."""
+            return fid.copy(data=fid.values * np.exp(-15 * fid["time"].values))
+
+        found = fk.measure(fade(record(line(100, 5) + noise(0.01, 90))))
+    finally:
+        STEPS.clear()
+        STEPS.update(before)
+    assert str(found.linewidth_status.values).startswith("doubtful")
+    assert "what the step fade does" in found.attrs["notes"]
+
+
+def test_every_step_is_a_window_or_known_to_leave_widths_alone():
+    from fidkit.measure.record import NEUTRAL, WINDOWS
+
+    windows = {name for name, spec in fk.STEPS.items() if spec.room == WINDOWS}
+    assert windows | NEUTRAL == set(fk.STEPS)

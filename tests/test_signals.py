@@ -65,12 +65,6 @@ def test_spectrum_axis():
     assert descending["shift"].values == pytest.approx([0, 10, 20], rel=1e-12)
 
 
-def test_a_carrier_in_megahertz_is_noticed():
-    made = fk.from_array(np.ones(8), dwell_time=1e-4, carrier_frequency=63.87)
-    assert "is carrier_frequency in Hz?" in made.attrs["notes"]
-    assert "notes" not in fid().attrs
-
-
 @pytest.mark.parametrize(
     ("change", "message"),
     [
@@ -95,6 +89,8 @@ def test_a_carrier_in_megahertz_is_noticed():
         ({"carrier_frequency": True}, "carrier_frequency must be a positive number of Hz"),
         ({"time_start": np.inf}, "time_start must be a number of s"),
         ({"time_start": 1.7e9, "dwell_time": 1e-6}, "count from the pulse instead of from a date"),
+        ({"carrier_frequency": 63.87}, "give it in Hz, not MHz"),
+        ({"dwell_time": 1e-9, "carrier_frequency": 1e6}, "more than half the spectral width"),
         ({"nucleus": "27X"}, "nucleus must be one of 1H"),
         ({"history": "x"}, "written by fidkit itself"),
         ({"coords": {"time": np.arange(8)}}, "coords must name coordinates of the leading"),

@@ -13,12 +13,14 @@ import scipy.fft
 from fidkit.measure.found import WEAK_ENERGY, Line, Wanted, line_of, nothing
 from fidkit.measure.record import Record
 from fidkit.numerics import lines as numerics
-from fidkit.numerics.lines import ADDITION_COST, Band, Crowd
+from fidkit.numerics.lines import ADDITION_COST, GAUSSIAN_WIDTH, Band, Crowd
 from fidkit.params import FidkitError
 
 __all__ = ["allowed_points", "constant_offset", "noise_threshold", "with_care"]
 
+#: How far a model grows: more than this is no line with something beside it any more.
 MOST_ADDITIONS = 8
+#: Harmonics of the mains that may be stronger than the line.
 MOST_TONES = 6
 #: A line this much weaker than a steady tone is no reason to call the tone pick-up.
 LEAST_BESIDE_TONES = 0.1
@@ -33,16 +35,16 @@ def constant_offset(values: npt.NDArray[Any]) -> npt.NDArray[Any]:
     """The constant offset of each record, from its last tenth; 0 where it does not stand out."""
     tail = values[:, -max(values.shape[1] // 10, 4) :]
     mean = tail.mean(axis=-1)
-    # differences of neighbours: noise, whatever slow signal is left
-    noise = np.abs(np.diff(tail, axis=-1)).std(axis=-1) + np.abs(np.diff(tail, axis=-1)).mean(
-        axis=-1
-    )
+    # differences of neighbours show the noise even where a slow signal is left
+    steps = np.abs(np.diff(tail, axis=-1))
+    noise = steps.std(axis=-1) + steps.mean(axis=-1)
     return np.where(np.abs(mean) > 5 * noise / np.sqrt(tail.shape[1]), mean, 0)
 
 
 def allowed_points(
     points: int, dwell: float, region: tuple[float, float] | None
 ) -> npt.NDArray[np.bool_] | None:
+    """Which transform points lie in a region (Hz), in the order of `scipy.fft.fft`; None for all."""
     if region is None:
         return None
     axis = scipy.fft.fftfreq(points, dwell)
@@ -132,7 +134,7 @@ def with_care(
             named += others[: wanted.lines - 1]
         elif wanted.lines > 1:
             # all peaks at once: one by one, the first would widen until it covers the others
-            peaks = _peaks(values, dwell, wanted.lines)
+            peaks = _peaks(values - constant_offset(values[None]), dwell, wanted.lines)
             named = [(peak, 2 * resolution) for peak in peaks] if len(peaks) > 1 else named
         frequency, rate = zip(*named, strict=True)
         model = _Model(frequency, rate, named=len(named), offset=offset)
@@ -205,7 +207,7 @@ def with_care(
     members = [0]
     if wanted.lines == 1:
         members = _overlapping(fit, resolution, 0)
-        if len(members) > 1:
+        if len(members) > 1 and lines[0].shape:
             _make_composite(lines[0], fit, members, record)
     for place in range(model.named if wanted.lines > 1 else 0):
         unnamed = [n for n in _overlapping(fit, resolution, place) if n >= model.named]
@@ -215,7 +217,7 @@ def with_care(
             lines[place].notes.append(text)
             for name in ("frequency_offset", "linewidth", "t2_star", "amplitude", "phase"):
                 lines[place].status.setdefault(name, f"doubtful: {text}")
-    lines.sort(key=lambda line: line.frequency)
+    lines.sort(key=lambda line: (np.isnan(line.frequency), line.frequency))
     lines += [nothing() for _ in range(wanted.lines - model.named)]
     for line in lines:
         line.notes = notes + line.notes
@@ -273,7 +275,9 @@ def _peaks(values: npt.NDArray[Any], dwell: float, most: int) -> tuple[float, ..
 
 def _overlapping(fit: Crowd, resolution: float, first: int) -> list[int]:
     """A line and all that overlap it, directly or through each other; no steady tones."""
-    width = fit.rate / np.pi + 0.53 * np.sqrt(fit.gaussian) * (np.arange(fit.rate.size) == 0)
+    width = fit.rate / np.pi + GAUSSIAN_WIDTH * np.sqrt(fit.gaussian) * (
+        np.arange(fit.rate.size) == 0
+    )
     decays = np.array([_decays(fit, resolution, place) for place in range(fit.rate.size)])
     members = [first]
     for member in members:
@@ -321,7 +325,9 @@ def _band(model: _Model, points: int, dwell: float) -> Band:
     pieces = [
         numerics.band_around(np.array([place]), int(half), points, dwell).index[0]
         for place, half in zip(
-            model.frequency, numerics.half_band(rates, points, dwell), strict=False
+            model.frequency[: model.named],
+            numerics.half_band(rates, points, dwell),
+            strict=True,
         )
     ]
     return Band(np.unique(np.concatenate(pieces))[None], points, dwell)
@@ -358,6 +364,7 @@ def _from_crowd(
     model: _Model,
     noise: tuple[float, int] | None,
 ) -> Line:
+    """The numbers of one line of a joint fit, and what speaks against them."""
     scale = complex(fit.scale[place])
     amplitude, phase = abs(scale), float(np.angle(scale))
     shape_parameters = 2 * fit.frequency.size + (model.gaussian is not None)
@@ -382,6 +389,8 @@ def _from_crowd(
         count=band.index.size,
         noise_given=noise,
     )
+    if not line.shape:
+        return line
     if line.shape != "Lorentzian":
         line.notes.append(f"not Lorentzian: {line.shape} chosen")
         line.status.setdefault(

@@ -11,7 +11,7 @@ import numpy.typing as npt
 from fidkit.measure.record import Record
 from fidkit.numerics import lines as numerics
 
-__all__ = ["QUANTITIES", "WEAK_ENERGY", "Line", "Wanted", "line_of", "nothing"]
+__all__ = ["QUANTITIES", "WEAK_ENERGY", "Line", "Wanted", "column_name", "line_of", "nothing"]
 
 #: Every quantity with its unit (None: the signal's own) and what it is.
 QUANTITIES: dict[str, tuple[str | None, str]] = {
@@ -26,6 +26,19 @@ QUANTITIES: dict[str, tuple[str | None, str]] = {
     "phase": ("degree", "phase at time zero"),
     "snr": ("1", "peak height over rms noise of the real part"),
 }
+
+UNIT_IN_NAME = {"Hz": "_hz", "ppm": "_ppm", "s": "_s", "T": "_tesla", "degree": "_degree", "1": ""}
+
+
+def column_name(quantity: str, unit: str, end: str = "") -> str:
+    """The name of a column with its unit, such as ``linewidth_std_hz``; `end` is ``_std`` or none.
+
+    The unit of an amplitude is that of its record, so no name of a column can hold it.
+    """
+    if quantity == "amplitude":
+        return f"{quantity}{end}"
+    return f"{quantity.removesuffix('_ppm')}{end}{UNIT_IN_NAME.get(unit, f'_{unit}')}"
+
 
 #: Energy (sum |s|^2 / (2 sigma^2)) under which a start value may be grossly wrong.
 WEAK_ENERGY = 25.0

@@ -10,8 +10,15 @@ import numpy.typing as npt
 import xarray as xr
 
 from fidkit import signals
-from fidkit.measure.found import QUANTITIES, Line, Wanted
-from fidkit.measure.record import Record, Unseen, record_as_it_stands, record_of, total_shift
+from fidkit.measure.found import QUANTITIES, Line, Wanted, column_name
+from fidkit.measure.record import (
+    Record,
+    Unseen,
+    one_channel,
+    record_as_it_stands,
+    record_of,
+    total_shift,
+)
 from fidkit.measure.recorded import measure_block
 from fidkit.measure.standing import measure_standing
 from fidkit.nuclei import find_nucleus
@@ -121,6 +128,10 @@ def measure(
         frequency = signal["frequency"].values
         for values in signal.values.reshape(-1, points):
             results.append(measure_standing(values, frequency, wanted))
+    if one_channel(signal):
+        for line in (line for found in results for line in found):
+            for name in ("frequency_offset", "frequency_offset_ppm", "field"):
+                line.status.setdefault(name, "doubtful: one channel cannot tell the sign")
     if reason:
         notes.append(
             f"measured as it stands, since {reason}: the linewidth holds any apodization, and the "
@@ -227,8 +238,8 @@ def _dataset(
         t2_star_std = t2_star * width_std / width
     # a line that was shifted by hand is still where it was in the field
     tesla = (carrier + frequency - total_shift(signal)) / nucleus.hertz_per_tesla()
-    tesla_std = tesla * np.hypot(
-        frequency_std / (carrier + frequency), nucleus.relative_uncertainty
+    tesla_std = np.hypot(
+        frequency_std / nucleus.hertz_per_tesla(), tesla * nucleus.relative_uncertainty
     )
     numbers = {
         "frequency_offset": (frequency, frequency_std),
@@ -320,8 +331,9 @@ def table(*results: xr.Dataset) -> pandas.DataFrame:
     Returns
     -------
     pandas.DataFrame
-        Columns: ``source``, the leading dimensions where there are any, then every quantity with
-        its ``_std`` and ``_status``, in the units of `QUANTITIES`.
+        Columns: ``source``, the leading dimensions where there are any, then every quantity, its
+        standard uncertainty and its status, such as ``linewidth_hz``, ``linewidth_std_hz`` and
+        ``linewidth_status``; an amplitude is in the unit of its record, ``amplitude_unit``.
 
     Raises
     ------
@@ -340,6 +352,11 @@ def table(*results: xr.Dataset) -> pandas.DataFrame:
             if result.sizes
             else result.expand_dims("record").to_dataframe().reset_index(drop=True)
         )
+        for name in QUANTITIES:
+            unit = str(result[name].attrs["units"])
+            columns = {f"{name}{end}": column_name(name, unit, end) for end in ("", "_std")}
+            rows = rows.rename(columns=columns)
+        rows["amplitude_unit"] = str(result["amplitude"].attrs["units"])
         rows.insert(0, "source", str(result.attrs.get("source", "")))
         frames.append(rows)
     return pandas.concat(frames, ignore_index=True)

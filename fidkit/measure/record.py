@@ -20,13 +20,29 @@ from fidkit.chain import Call, chain_of
 from fidkit.params import FidkitError
 from fidkit.steps.transform import inverse_transform
 
-__all__ = ["Record", "Unseen", "record_as_it_stands", "record_of", "total_shift"]
+__all__ = [
+    "NEUTRAL",
+    "Record",
+    "Unseen",
+    "one_channel",
+    "record_as_it_stands",
+    "record_of",
+    "total_shift",
+]
 
 #: Smallest weight that is divided out again, of the largest, by the precision of the values:
 #: rounding errors, of 1e-16 and 1e-7, grow by its inverse and must stay far below any noise.
 SMALLEST_WEIGHT = {8: 1e-3, 16: 1e-8}
 
 WINDOWS = "fidkit.steps.apodization"
+#: Steps that leave the natural width of a line alone. What is not named here, and is no window, may
+#: do anything to it, and the result says so.
+NEUTRAL = {
+    *("average_shots", "combine_channels", "correct_quadrature", "make_analytic", "rebuild_start"),
+    *("remove_end", "remove_filter_delay", "remove_offset", "remove_start", "reverse_frequency"),
+    *("shift_frequency", "zero_fill", "fourier_transform", "inverse_transform"),
+    *("auto_phase", "correct_baseline", "correct_phase"),
+}
 COMBINING = {"average_shots", "combine_channels"}
 #: Steps between transform and measurement that leave the way back open.
 UNDONE = ("correct_phase", "auto_phase", "correct_baseline")
@@ -93,7 +109,7 @@ def record_of(signal: xr.DataArray) -> Record:
     except FidkitError as error:
         raise Unseen(f"its history cannot be read ({error})") from None
     for call in calls:
-        if not call.spec.room.startswith("fidkit.steps."):
+        if call.spec.room != WINDOWS and call.step not in NEUTRAL:
             raise Unseen(f"what the step {call.step} does to a width is not known")
     half = False
     fid = signal
@@ -135,6 +151,11 @@ def record_of(signal: xr.DataArray) -> Record:
         start=start + first * dwell,
         dwell=dwell,
     )
+
+
+def one_channel(signal: xr.DataArray) -> bool:
+    """Whether a signal comes from a real-valued record, which does not know the sign of an offset."""
+    return "make_analytic(" in str(signal.attrs.get("history", ""))
 
 
 def total_shift(signal: xr.DataArray) -> float:

@@ -18,7 +18,7 @@ from fidkit.params import FidkitError
 __all__ = ["measure_block"]
 
 #: Lines taken off a record at most, to find the one that is asked for.
-MOST_LINES = 16
+MOST_STRIPPED = 16
 
 
 def measure_block(record: Record, wanted: Wanted) -> list[list[Line]]:
@@ -98,7 +98,7 @@ def _chosen(
     result = np.zeros((3, values.shape[0]))
     others = []
     for row, one in enumerate(values):
-        lines, rest = numerics.strip(one, dwell, WEAK_ENERGY, MOST_LINES)
+        lines, rest = numerics.strip(one, dwell, WEAK_ENERGY, MOST_STRIPPED)
         lines = _without_remains(lines)
         within = np.ones(lines.frequency.size, bool)
         if wanted.region is not None:
@@ -244,7 +244,7 @@ def _quiet_outside(
         turn = np.exp((2j * np.pi * frequency[row] - np.pi * width[row]) * time)
         own = turn * (np.vdot(turn, rest[row]) / np.vdot(turn, turn))
         _, left = numerics.strip(
-            rest[row] - own, dwell, 10 * WEAK_ENERGY, MOST_LINES, allowed=outside[row]
+            rest[row] - own, dwell, 10 * WEAK_ENERGY, MOST_STRIPPED, allowed=outside[row]
         )
         rest[row] = left + own
     return rest

@@ -29,6 +29,7 @@ Whole = npt.NDArray[Any]
 
 __all__ = [
     "ADDITION_COST",
+    "GAUSSIAN_WIDTH",
     "Band",
     "Crowd",
     "SingleFit",
@@ -52,6 +53,9 @@ __all__ = [
 #: Bayesian information criterion (Schwarz, Ann. Stat. 6, 461 (1978)) by more than this: "very
 #: strong" in the scale of Kass and Raftery, J. Am. Stat. Assoc. 90, 773 (1995).
 ADDITION_COST = 10.0
+
+#: Full width of the line of ``exp(-G t^2)`` over the square root of G: 2 sqrt(ln 2) / pi.
+GAUSSIAN_WIDTH = 2 * np.sqrt(np.log(2)) / np.pi
 
 #: Half the band, in full widths of the line (a band of +-25 loses 0.6 % in the uncertainty), and
 #: at least in points (for the noise estimate).
@@ -164,7 +168,7 @@ def search(
     tail = values[:, -max(points // 10, 8) :]
     noise = tail.real.var(axis=-1) / 2 + tail.imag.var(axis=-1) / 2
     # a window off by a factor of two from the line's own decay loses only 6 % in height
-    decays = 1.0 * 4.0 ** np.arange(0, max(1, int(np.log(points / 4) / np.log(4)) + 1))
+    decays = 4.0 ** np.arange(0, max(1, int(np.log(points / 4) / np.log(4)) + 1))
     for decay in decays:
         window = np.exp(-decay / points * index)
         power = np.abs(scipy.fft.fft(values * window, axis=-1)) ** 2 / (window**2).sum()
@@ -553,17 +557,18 @@ def fit_crowd(
         _, orthogonal, _, _, change = solve(theta.tobytes())
         return np.asarray(-(change - orthogonal @ (orthogonal.T @ change)) / size)
 
-    outcome = least_squares(
-        miss,
-        np.clip(full[free], low + 1e-9 * scale, high),
-        jac=slope,
-        bounds=(low, high),
-        x_scale=scale,
-        xtol=1e-10,
-        ftol=1e-14,
-        gtol=1e-14,
-        max_nfev=60,
-    )
+    with np.errstate(divide="ignore", invalid="ignore"):  # of a fit that is exactly singular
+        outcome = least_squares(
+            miss,
+            np.clip(full[free], low + 1e-9 * scale, high),
+            jac=slope,
+            bounds=(low, high),
+            x_scale=scale,
+            xtol=1e-10,
+            ftol=1e-14,
+            gtol=1e-14,
+            max_nfev=60,
+        )
     basis, _, linear, residual, change = solve(outcome.x.tobytes())
     theta = full.copy()
     theta[free] = outcome.x
@@ -677,7 +682,7 @@ def composite(fit: Crowd, members: list[int]) -> tuple[Real, Real]:
     from scipy.special import wofz
 
     count = fit.frequency.size
-    width = float(fit.rate[members].max() / np.pi + 0.53 * np.sqrt(fit.gaussian))
+    width = float(fit.rate[members].max() / np.pi + GAUSSIAN_WIDTH * np.sqrt(fit.gaussian))
     low = float(fit.frequency[members].min()) - 3 * width
     high = float(fit.frequency[members].max()) + 3 * width
     grid = np.linspace(low, high, 400 * len(members) + 1)
