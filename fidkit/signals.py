@@ -330,6 +330,13 @@ def check_signal(signal: Any, where: str) -> None:
             f"{where}: the attribute carrier_frequency must be a positive number of Hz; got "
             f"{shown(carrier)}; arithmetic may have dropped it: set it, or use .copy(data=...)"
         )
+    for name in ("time_start", "spectral_width", "measured_from"):
+        value = signal.attrs.get(name, 0.0)
+        if not isinstance(value, Real) or not np.isfinite(float(value)):
+            raise FidkitError(
+                f"{where}: the attribute {name} is written by fidkit as a number; got "
+                f"{shown(value)}; leave it as it was, or remove it"
+            )
     # of a spectrum a part may be cut out, of an FID with zeros not
     most = signal.shape[-1] if in_time else np.inf
     measured = signal.attrs.get("acquired_points", 1)

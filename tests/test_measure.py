@@ -678,3 +678,47 @@ def test_every_step_is_a_window_or_known_to_leave_widths_alone():
 
     windows = {name for name, spec in fk.STEPS.items() if spec.room == WINDOWS}
     assert windows | NEUTRAL == set(fk.STEPS)
+
+
+def test_a_tone_beside_the_line_is_not_taken_for_it():
+    time = DWELL * np.arange(2048)
+    for seed, strength in ((91, 1.0), (92, 5.0)):
+        values = line(123.4, 6, time=time) + strength * np.exp(100j * np.pi * time)
+        found = fk.measure(record(values + noise(0.03, seed, (2048,))))
+        near(found, "frequency_offset", 123.4)
+        near(found, "linewidth", 6.0)
+        assert "steady tone at 50.0 Hz" in str(found.status.values)
+
+
+def test_lines_outside_the_region_do_not_fill_up():
+    values = line(-2000, 10) + line(200, 6) + noise(0.01, 93)
+    found = fk.measure(record(values), region=(100.0, 300.0), lines=2)
+    near(found.isel(line=0), "frequency_offset", 200.0)
+    assert np.isnan(float(found.frequency_offset[1]))
+
+
+def test_a_small_offset_under_a_line_near_the_carrier():
+    """Source: definition of a standard uncertainty: the mean error stays well within one."""
+    for level, snr, frequency in ((0.1, 3, 0.0), (0.01, 30, 0.0), (0.01, 30, 2.0)):
+        values = line(frequency, 6.4) + level + noise(1 / snr, 94, (100, POINTS))
+        found = fk.measure(record(values))
+        for name, true in (("linewidth", 6.4), ("frequency_offset", frequency)):
+            apart = (found[name] - true) / found[f"{name}_std"]
+            assert abs(float(apart.mean())) < 0.8, (level, snr, name)
+
+
+def test_an_offset_alone_is_said_to_be_one():
+    found = fk.measure(record(0.3 + noise(1.0, 95, (20, 2048))))
+    for status in found.frequency_offset_status.values:
+        assert status != "ok"
+
+
+def test_odd_records_raise_nothing():
+    """Noise-free, far too short a decay, empty tails: numbers or reasons, no warning."""
+    for values in (line(100, 160), line(100, 4000)):
+        found = fk.measure(record(values))
+        assert np.isfinite(float(found.frequency_offset)) or str(found.status.values) != "ok"
+    for name in ("time_start", "spectral_width", "measured_from"):
+        spoiled = fk.fourier_transform(record(line(100, 5))).assign_attrs({name: "soon"})
+        with pytest.raises(fk.FidkitError, match=name):
+            fk.measure(spoiled)

@@ -83,7 +83,8 @@ def with_care(
     values: npt.NDArray[Any],
     wanted: Wanted,
     starts: list[tuple[float, float]],
-    others: list[tuple[float, float]],
+    more: list[tuple[float, float]],
+    neighbours: list[tuple[float, float]],
     offset: bool,
     noise: tuple[float, int] | None,
 ) -> tuple[list[Line], npt.NDArray[Any]]:
@@ -99,8 +100,10 @@ def with_care(
         Which lines are asked for.
     starts : list of (float, float)
         Frequency (Hz) and rate (1/s) of the line to start from; of several the better one is kept.
-    others : list of (float, float)
-        The same of other lines that are known, the most wanted first.
+    more : list of (float, float)
+        The same of further lines that may be asked for, the most wanted first.
+    neighbours : list of (float, float)
+        The same of lines that are known and not asked for.
     offset : bool
         Whether a constant offset stands out.
     noise : (float, int), optional
@@ -115,7 +118,6 @@ def with_care(
     """
     points, dwell, start = values.size, record.dwell, record.start
     resolution = 1 / (points * dwell)
-    allowed = allowed_points(points, dwell, wanted.region)
 
     def modelled(fit: Crowd) -> npt.NDArray[Any]:
         return numerics.model_in_time(fit, points, dwell, start)
@@ -131,7 +133,7 @@ def with_care(
         spectrum = scipy.fft.fft(values)
         named = [first]
         if wanted.lines > 1 and wanted.chosen:
-            named += others[: wanted.lines - 1]
+            named += more[: wanted.lines - 1]
         elif wanted.lines > 1:
             # all peaks at once: one by one, the first would widen until it covers the others
             peaks = _peaks(values - constant_offset(values[None]), dwell, wanted.lines)
@@ -141,7 +143,7 @@ def with_care(
         band = _band(model, points, dwell)
         inside = np.zeros(points, bool)
         inside[band.index] = True
-        for line in others[len(named) - 1 :]:
+        for line in more[len(named) - 1 :] + neighbours:
             if inside[round(line[0] * points * dwell) % points]:
                 model = model.with_line(*line)
         fit = _fit(record, spectrum, model, band)
@@ -153,11 +155,8 @@ def with_care(
             model = replace(model, frequency=tuple(fit.frequency), rate=tuple(fit.rate))
             band = _band(model, points, dwell)
             fit = _fit(record, spectrum, model, band)
-        while model.named < wanted.lines:
-            among = allowed
-            if wanted.near is not None and allowed is None:
-                among = np.isin(np.arange(points), band.index)
-            one, decay, energy = look(values, fit, among)
+        while model.named < wanted.lines and not wanted.chosen:
+            one, decay, energy = look(values, fit, None)
             if energy < WEAK_ENERGY:
                 break
             model = replace(model, frequency=tuple(fit.frequency), rate=tuple(fit.rate))
@@ -199,7 +198,7 @@ def with_care(
     notes: list[str] = []
     tones = np.zeros_like(values)
     if wanted.lines == 1 and not wanted.chosen and not _decays(fit, resolution):
-        found = _behind_tones(values, fit, resolution, grow, look, modelled)
+        found = _behind_tones(values, fit, dwell, grow, modelled)
         if found is not None:
             (model, fit, band), tones, note = found
             notes.append(note)
@@ -230,12 +229,12 @@ def with_care(
 def _behind_tones(
     values: npt.NDArray[Any],
     fit: Crowd,
-    resolution: float,
+    dwell: float,
     grow: Callable[..., tuple[_Model, Crowd, Band]],
-    look: Callable[..., tuple[float, float, float]],
     modelled: Callable[[Crowd], npt.NDArray[Any]],
 ) -> tuple[tuple[_Model, Crowd, Band], npt.NDArray[Any], str] | None:
     """Look for an FID behind what does not decay: that is pick-up, if there is a line besides."""
+    resolution = 1 / (values.size * dwell)
     tones: list[float] = []
     rest = values
     strongest = abs(fit.scale[0])
@@ -243,11 +242,12 @@ def _behind_tones(
         if any(abs(fit.frequency[0] - tone) < resolution for tone in tones):
             return None  # what was taken off comes back: no tone then
         tones.append(float(fit.frequency[0]))
-        one, decay, energy = look(rest, fit, None)
-        if energy < WEAK_ENERGY:
-            return None
+        # only the tone goes: what else was fitted beside it may be the line
         rest = rest - modelled(fit)[0]
-        grown = grow(rest, (one, decay))
+        found = numerics.search((rest - constant_offset(rest[None]))[None], dwell)
+        if found.energy[0] < WEAK_ENERGY:
+            return None
+        grown = grow(rest, (float(found.frequency[0]), float(found.rate[0])))
         fit = grown[1]
         if _decays(fit, resolution):
             if abs(fit.scale[0]) < LEAST_BESIDE_TONES * strongest:
@@ -296,7 +296,7 @@ def _make_composite(line: Line, fit: Crowd, members: list[int], record: Record) 
     turn = record.weight * np.exp(-2j * np.pi * values[0] * time - 1j * values[3])
     alone = record.weight * np.exp(-2j * np.pi * line.frequency * time - 1j * line.phase)
     # height of the whole over that of its first part; the noise is the same
-    higher = float((parts[members] @ turn).sum().real / (parts[0] @ alone).real)
+    higher = float(abs((parts[members] @ turn).sum()) / abs(parts[0] @ alone))
     line.snr, line.snr_std = higher * line.snr, higher * line.snr_std
     line.frequency, line.width, line.amplitude, line.phase = (float(part) for part in values)
     line.frequency_std, line.width_std, line.amplitude_std, line.phase_std = (
@@ -305,7 +305,8 @@ def _make_composite(line: Line, fit: Crowd, members: list[int], record: Record) 
     line.shape = f"composite of {len(members)}"
     line.notes.append(f"not Lorentzian: {len(members)} overlapping lines measured as one shape")
     text = f"doubtful: shape of {len(members)} parts; the uncertainty leaves out their choice"
-    for name in ("frequency_offset", "frequency_offset_ppm", "linewidth", "linewidth_ppm"):
+    names = ("frequency_offset", "frequency_offset_ppm", "linewidth", "linewidth_ppm")
+    for name in (*names, "amplitude", "phase", "snr"):
         line.status.setdefault(name, text)
     line.status.setdefault(
         "t2_star", "doubtful: the line is no Lorentzian; T2* is that of its width alone"

@@ -138,6 +138,10 @@ def line_of(
     if energy < WEAK_ENERGY:
         line.status = dict.fromkeys(QUANTITIES, "doubtful: signal too weak to trust")
         line.notes.append("weak signal")
+    elif width * length < 1 / np.pi and abs(line.frequency) * length < 1:
+        text = "doubtful: a constant offset of the receiver looks the same"
+        line.status = dict.fromkeys(QUANTITIES, text)
+        line.notes.append("may be a constant offset and no line")
     elif line.amplitude_std > 0.3 * amplitude:
         line.status["amplitude"] = "doubtful: hardly told from zero; its errors are not symmetric"
     if width < 2 * line.width_std or width * length < 1 / np.pi:

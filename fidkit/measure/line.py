@@ -99,7 +99,8 @@ def measure(
     Linewidth and T2*: ``T2* = 1 / (pi FWHM)``, Fourier pair of the exponential decay. Signal to
     noise: height over rms noise. Uncertainties are from the covariance of the fit with the noise
     found in its residual. A decay that differs from the linewidth's T2* by more than three of its
-    standard uncertainties is said in ``t2_star_decay_status``.
+    standard uncertainties is said in ``t2_star_decay_status``. A constant offset is fitted where it
+    shows; under a line at the carrier a small one may not, so take it off with `remove_offset`.
     """
     wanted = _checked(signal, near, region, lines, noise)
     results: list[list[Line]] = []

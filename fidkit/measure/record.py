@@ -121,12 +121,12 @@ def record_of(signal: xr.DataArray) -> Record:
             raise Unseen("a baseline was taken away while it was a spectrum")
     measured = signals.acquired_points(fid)
     values = fid.values[..., :measured].reshape(-1, measured)
-    if signal is fid:
-        # zeros that were appended by hand are no measurement either
-        silent = int((values != 0).any(axis=0)[::-1].argmax())
-        if silent > 0.05 * measured:
-            measured -= silent
-            values = values[:, :measured]
+    # zeros that were appended by hand are no measurement either; a transform leaves rounding there
+    rounding = 100 * np.finfo(values.dtype).eps if signal is not fid else 0.0
+    silent = int((np.abs(values) > rounding * np.abs(values).max()).any(axis=0)[::-1].argmax())
+    if silent > 0.05 * measured:
+        measured -= silent
+        values = values[:, :measured]
     start, dwell = signals.time_start(fid), signals.dwell_time(fid)
     weight = _weight(signal, calls, measured, start, dwell)
     if half:

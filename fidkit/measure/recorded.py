@@ -17,6 +17,13 @@ from fidkit.params import FidkitError
 
 __all__ = ["measure_block"]
 
+Starts = list[tuple[float, float]]
+"""Frequency (Hz) and rate (1/s) of lines."""
+
+#: A constant offset is taken into the fit where it would otherwise pull a line near the carrier:
+#: twice the log-likelihood that chance gives in one of twenty records.
+OFFSET_EVIDENCE = 6.0
+
 #: Lines taken off a record at most, to find the one that is asked for.
 MOST_STRIPPED = 16
 
@@ -33,12 +40,14 @@ def measure_block(record: Record, wanted: Wanted) -> list[list[Line]]:
     results: list[list[Line]] = [[] for _ in range(records)]
     rest = clean.copy()
 
-    others: list[list[tuple[float, float]]] = [[] for _ in range(records)]
+    more: list[Starts] = [[] for _ in range(records)]
+    neighbours: list[Starts] = [[] for _ in range(records)]
     if wanted.chosen:
-        found, others = _chosen(clean, dwell, wanted)
+        found, more, neighbours = _chosen(clean, dwell, wanted)
     else:
         found = numerics.search(clean, dwell)
     seen = found.energy >= noise_threshold(points)
+    offset = np.zeros(records, bool)
     half = numerics.half_band(found.rate, points, dwell)
     # an offset sits in a single point of the transform, at the carrier: no harm elsewhere
     at_carrier = np.abs(found.frequency) < 5 * (found.rate + 1 / (points * dwell))
@@ -62,7 +71,9 @@ def measure_block(record: Record, wanted: Wanted) -> list[list[Line]]:
             & (fit.other < 2 * np.log(count) + 20)
             & (-fit.kappa.real > resolution)
             & (moved < found.rate[rows] + 2 * resolution)
+            & (fit.offset < OFFSET_EVIDENCE)
         )
+        offset[rows] = fit.offset >= OFFSET_EVIDENCE
         for place in np.flatnonzero(enough):
             row = rows[place]
             results[row] = [_from_single(fit, int(place), record, count, _at(noise, row))]
@@ -76,8 +87,18 @@ def measure_block(record: Record, wanted: Wanted) -> list[list[Line]]:
                 raw = numerics.search(values[row : row + 1], dwell)
                 starts.append((float(raw.frequency[0]), float(raw.rate[0])))
             results[row], rest[row] = with_care(
-                record, values[row], wanted, starts, others[row], bool(level[row]), _at(noise, row)
+                record,
+                values[row],
+                wanted,
+                starts,
+                more[row],
+                neighbours[row],
+                bool(level[row]) or bool(offset[row]),
+                _at(noise, row),
             )
+    for line in (line for lines in results for line in lines):
+        if wanted.near is not None and abs(line.frequency - wanted.near) > 0.05 / dwell:
+            line.notes.append("the nearest line is far from the frequency asked for")
     if wanted.lines == 1:
         _second_opinion(record, rest, [result[0] for result in results])
     return results
@@ -89,16 +110,18 @@ def _at(noise: tuple[npt.NDArray[Any], int] | None, row: int) -> tuple[float, in
 
 def _chosen(
     values: npt.NDArray[Any], dwell: float, wanted: Wanted
-) -> tuple[numerics.Found, list[list[tuple[float, float]]]]:
-    """Start values of the line asked for, record by record, and the other lines of the record.
+) -> tuple[numerics.Found, list[Starts], list[Starts]]:
+    """Start values of the line asked for, of further ones, and of those not asked for, by record.
 
     A strong line's foot would be taken for the line asked for, so lines are taken off first.
     """
     allowed = allowed_points(values.shape[1], dwell, wanted.region)
     result = np.zeros((3, values.shape[0]))
-    others = []
+    more: list[Starts] = []
+    neighbours: list[Starts] = []
+    least = noise_threshold(values.shape[1])
     for row, one in enumerate(values):
-        lines, rest = numerics.strip(one, dwell, WEAK_ENERGY, MOST_STRIPPED)
+        lines, rest = numerics.strip(one, dwell, least, MOST_STRIPPED)
         lines = _without_remains(lines)
         within = np.ones(lines.frequency.size, bool)
         if wanted.region is not None:
@@ -112,9 +135,9 @@ def _chosen(
         elif wanted.region is not None:
             left = numerics.search(rest[None], dwell, allowed=allowed)
             result[:, row] = left.frequency[0], left.rate[0], left.energy[0]
-        order = np.concatenate([order[1:], np.flatnonzero(~within)])
-        others.append([(float(f), float(r)) for f, r in table[:2, order].T])
-    return numerics.Found(*result), others
+        more.append([(float(f), float(r)) for f, r in table[:2, order[1:]].T])
+        neighbours.append([(float(f), float(r)) for f, r in table[:2, ~within].T])
+    return numerics.Found(*result), more, neighbours
 
 
 def _without_remains(lines: numerics.Found) -> numerics.Found:

@@ -165,7 +165,7 @@ def search(
     place = np.zeros(records, dtype=np.int64)
     rate = np.zeros(records)
     # noise twice, as either may hold signal: the end of the record, and most of the transform
-    tail = values[:, -max(points // 10, 8) :]
+    tail = values[:, -max(points // 10, min(points // 2, 64)) :]
     noise = tail.real.var(axis=-1) / 2 + tail.imag.var(axis=-1) / 2
     # a window off by a factor of two from the line's own decay loses only 6 % in height
     decays = 4.0 ** np.arange(0, max(1, int(np.log(points / 4) / np.log(4)) + 1))
@@ -186,7 +186,7 @@ def search(
         place = np.where(better, top, place)
         rate = np.where(better, decay / (points * dwell), rate)
     frequency = scipy.fft.fftfreq(points, dwell)[place]
-    with np.errstate(divide="ignore", invalid="ignore"):
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         energy = np.where(noise > 0, best / (2 * noise), np.where(best > 0, np.inf, 0.0))
     return Found(frequency, rate, energy)
 
@@ -274,7 +274,7 @@ class SingleFit:
     `variance` is of each part of kappa, `variance_log` of each part of log c, `covariance` between
     log c and kappa (complex), all for unit noise: multiply by noise^2. `noise` is the standard
     deviation of each part of a transform point. `gaussian` (test for a Gaussian part), `other`
-    (largest residual power) and `background` are what the residual says against the model,
+    (largest residual power) and `background` (a constant in the band) and `offset` (one in the record) are what the residual says against the model,
     in units of twice the log-likelihood.
     """
 
@@ -287,6 +287,7 @@ class SingleFit:
     gaussian: Real
     other: Real
     background: Real
+    offset: Real
     converged: npt.NDArray[np.bool_]
 
 
@@ -373,6 +374,10 @@ def fit_single(spectrum: Complex, band: Band, kappa: Complex) -> SingleFit:
         gaussian = (_dot(bend, residual).real / plain) ** 2 / _dot(bend, bend).real
     flat = unexplained(np.ones_like(shape))
     background = np.abs(_dot(flat, residual) / plain) ** 2 / _dot(flat, flat).real
+    # a constant offset of the record sits in point 0 of the transform alone
+    carrier = unexplained((band.index == 0).astype(complex))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        offset = np.abs(_dot(carrier, residual) / plain) ** 2 / _dot(carrier, carrier).real
     other = size.max(axis=-1) / plain**2
     # log c = log scale; d(scale)/scale = ... - overlap/scale d(kappa)
     variance = 1 / stiffness
@@ -387,6 +392,7 @@ def fit_single(spectrum: Complex, band: Band, kappa: Complex) -> SingleFit:
         gaussian=np.nan_to_num(gaussian),
         other=other,
         background=background,
+        offset=np.nan_to_num(offset),
         converged=converged,
     )
 
@@ -716,6 +722,8 @@ def composite(fit: Crowd, members: list[int]) -> tuple[Real, Real]:
             options={"xatol": 1e-9 * (high - low)},
         ).x
         half = float(height(np.array(peak))) / 2
+        if half <= 0:
+            return np.full(4, np.nan)
 
         def above(frequency: float) -> float:
             return float(height(np.array(frequency))) - half
@@ -725,6 +733,8 @@ def composite(fit: Crowd, members: list[int]) -> tuple[Real, Real]:
             end = peak
             while above(end) > 0 and abs(end - peak) < 1e3 * (high - low):
                 end += direction * width / 20
+            if above(end) > 0:
+                return np.full(4, np.nan)
             edges.append(brentq(above, end - direction * width / 20, end))
         return np.array([peak, edges[1] - edges[0], abs(total), np.angle(total)])
 
