@@ -278,9 +278,11 @@ def test_bare_arrays(tmp_path):
     with pytest.raises(FidkitError) as caught:
         fk.read(path)
     assert str(caught.value) == (
-        "coil_3.npy: carrier_frequency is not in the file; pass carrier_frequency=<Hz>"
+        "coil_3.npy: carrier_frequency is not in the file; give carrier_frequency in Hz (--carrier-frequency HZ)"
     )
-    with pytest.raises(FidkitError, match=r"coil_3\.npy: dwell_time .* pass dwell_time=<s>"):
+    with pytest.raises(
+        FidkitError, match=r"coil_3\.npy: dwell_time .* give dwell_time in s \(--dwell-time S\)"
+    ):
         fk.read(path, carrier_frequency=CARRIER)
     fid = fk.read(path, carrier_frequency=CARRIER, dwell_time=1e-3, dims="echo_time")
     assert fid.dims == ("echo_time", "time")
@@ -303,6 +305,26 @@ def test_archives_of_plain_arrays(tmp_path):
     spectrum = fk.read(path)
     assert spectrum.frequency.values.tolist() == [10, 20, 30, 40]
     assert "stray" in spectrum.attrs["notes"]
+
+
+@pytest.mark.parametrize(
+    ("digits", "says"),
+    [
+        # closed form: half a unit of 0.1 ms at either end, over 255 steps of 0.2 ms, is 0.2 %
+        (".4f", "the dwell time is known to 0.2 % only, from the digits of the time column"),
+        (".9g", ""),
+        (".8e", ""),
+    ],
+)
+def test_how_well_a_time_column_tells_the_dwell_time(read, digits, says):
+    dwell = 2.0123456e-4
+    rows = [f"{number * dwell:{digits}},1,{number}" for number in range(256)]
+    fid = read("\n".join([HEAD + "time_s,real,imag", *rows]) + "\n", "clock.csv")
+    told = [note for note in fid.attrs.get("notes", "").splitlines() if "dwell" in note]
+    assert told == ([says] if says else [])
+    #: What the note says, or what goes without a note.
+    known = 2e-3 if says else 1e-5
+    assert fk.signals.dwell_time(fid) == pytest.approx(dwell, rel=known)
 
 
 def npy(header: str, content: bytes = b"") -> bytes:
@@ -340,14 +362,14 @@ MALFORMED = {
     "one_row.csv": (HEAD + "time_s,real,imag\n0,1,2\n", "at least 2 rows; got 1"),
     "word.csv": (GOOD.replace("3.25", "three"), "line 7: real must be a number; got 'three'"),
     "nan.csv": (GOOD.replace("3.25", "nan"), "line 7: real must be a finite number; got 'nan'"),
-    "short.csv": (GOOD.replace(",-1.0", ""), "line 7: has 2 columns where"),
+    "short.csv": (GOOD.replace(",-1.0", ""), "nothing stands for imag; complete the line"),
     "cut.csv": (GOOD[:-8], "line 8: has 2 columns"),
     "comma.csv": (GOOD.replace(",", ";").replace("3.25", "3,25"), "got '3,25'; write a decimal point"),
     "commas.csv": (GOOD.replace("3.25", "3,25"), "line 7: has 4 columns"),
     "uneven.csv": (GOOD.replace("0.003", "0.0034"), "time must be evenly spaced; line 7"),
     "still.csv": (table("time_s,signal", [1, 1], [2, 3]), "time must ascend"),
     "backwards.csv": (table("time_s,signal", [2, 1], [2, 3]), "time must ascend"),
-    "no_time.csv": (table("real,imag", REAL, IMAGINARY), "dwell_time is not in the file; pass dwell_time=<s>"),
+    "no_time.csv": (table("real,imag", REAL, IMAGINARY), "dwell_time is not in the file; give dwell_time in s"),
     "no_carrier.csv": (GOOD.replace("carrier_frequency_hz: 63.87e6", "x: 1"), "carrier_frequency is not in the file"),
     "no_unit.csv": (GOOD.replace("frequency_hz", "frequency"), "line 1: carrier_frequency must carry its unit"),
     "bad_key.csv": (GOOD.replace("63.87e6", "fast"), "line 1: carrier_frequency_hz must be a number; got 'fast'"),
@@ -374,6 +396,8 @@ MALFORMED = {
     "attributes.npz": (saved(data=REAL, attributes="[", **FACTS), "attributes must be JSON"),
     "dims.npz": (saved(data=REAL, dims=np.array(["a", "b"]), **FACTS), "dims must name"),
     "coordinate.npz": (saved(data=REAL[None], coordinate_shot=REAL, **FACTS), "coordinate"),
+    "book.xlsx": (npz(**{"xl/workbook.xml": b"<a/>", "[Content_Types].xml": b"<a/>"}), "is a spreadsheet or office document; save the table as .csv"),
+    "book.xls": (b"\xd0\xcf\x11\xe0\xa1\xb1\x1a\xe1" + bytes(600), "is a spreadsheet or office document"),
     "cut.npz": (saved(data=REAL, **FACTS)[:-30], "the archive is damaged"),
     "bomb.npz": (npz(**{"data.npy": bytes(300_000_000)}), "which no measured record does"),
     "huge.npz": (npz(**{"data.npy": npy(HUGE)}), "must hold 16000000000000 bytes"),
@@ -401,7 +425,9 @@ def test_malformed_input_is_one_line_with_the_reason(read, name):
 
 
 def test_files_that_cannot_be_opened(tmp_path):
-    with pytest.raises(FidkitError, match=r"gone\.dx: cannot be read: No such file"):
+    with pytest.raises(
+        FidkitError, match=r"gone\.dx: there is no such file or folder; check the path"
+    ):
         fk.read(tmp_path / "gone.dx")
     (tmp_path / "folder.zarr").mkdir()
     with pytest.raises(FidkitError, match=r"folder\.zarr: is a folder, and no Zarr store"):

@@ -221,7 +221,7 @@ def test_spelling_that_the_standard_allows(read, change):
         (small().replace("##TITLE= water\n", ""), "begins with ##TITLE="),
         (small().replace("(X++(R..R))", "(XR..XR)"), "tables of the form (X++(R..R))"),
         (small().replace("(X++(I..I))", "(X++(R..R))"), "a second page of R"),
-        (small(**{".OBSERVE FREQUENCY": "-"}), "carrier_frequency is not in the file; pass carrier_frequency=<Hz>"),
+        (small(**{".OBSERVE FREQUENCY": "-"}), "carrier_frequency is not in the file; give carrier_frequency in Hz"),
         (small(**{".OBSERVE FREQUENCY": "fast"}), "line 7: .OBSERVE FREQUENCY must be a number"),
         (small(**{".OBSERVE NUCLEUS": "^5Q"}), "nucleus must be one of"),
         (small(**{".DELAY": "(20, 20000)"}), ".DELAY: the two channels may differ"),
@@ -331,7 +331,7 @@ def test_the_axis_comes_from_the_number_printed_most_exactly(read):
     fid = read(small(LAST="0.00700864192, 2.6, -1, 2"))
     assert fk.signals.dwell_time(fid) == pytest.approx(0.00700864192 / 7, rel=1e-12)
     fid = read(small(LAST="0.007, 2.6, -1, 2", FACTOR="1.0, 0.2, 1, 1"))
-    assert "by the digits printed" in fid.attrs["notes"]
+    assert "only, from the digits of the header" in fid.attrs["notes"]
     fid = read(small(PAGE_I="0.0 1 2 4 3\n0.0 0 -3 -2 -1\n"))
     np.testing.assert_array_equal(fid.values.imag, IMAGINARY)
 
@@ -484,7 +484,9 @@ def test_the_way_back_from_a_written_spectrum(tmp_path):
 
 def test_a_nucleus_outside_the_table_can_be_read(read):
     text = small(**{".OBSERVE NUCLEUS": "^27Al"})
-    with pytest.raises(FidkitError, match=r"got '\^27Al' in the file; pass nucleus=<name>"):
+    with pytest.raises(
+        FidkitError, match=r"got '\^27Al' in the file; give nucleus \(--nucleus NAME\)"
+    ):
         read(text)
     fid = read(text, nucleus="1H")
     assert "nucleus '1H' was given; the file says '^27Al'" in fid.attrs["notes"]

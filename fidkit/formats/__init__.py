@@ -5,6 +5,8 @@ from __future__ import annotations
 import math
 import os
 from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from functools import partial
 from numbers import Integral, Real
 from pathlib import Path
 from typing import Any
@@ -13,18 +15,77 @@ import numpy as np
 import xarray as xr
 
 from fidkit import signals
-from fidkit.formats.record import FIELDS, Record, check_facts, writable
+from fidkit.formats import archive, jcamp, numpy_file, text_table
+from fidkit.formats.record import FIELDS, SPREADSHEET, Record, check_facts, text_of, writable
 from fidkit.nuclei import find_nucleus
 from fidkit.params import FidkitError, shown
 
 __all__ = ["from_universal", "read", "write"]
 
-KNOWN = (
-    "fidkit reads JCAMP-DX (.dx, .jdx), text tables (.csv, .txt), .npy, .npz, netCDF (.nc) and Zarr "
-    "(.zarr)"
+
+@dataclass(frozen=True)
+class Format:
+    """What `read` and `write` know of a format."""
+
+    name: str
+    suffixes: tuple[str, ...]
+    """How such files are called; those with which `write` takes this format."""
+    knows: Callable[[Path, bytes], bool]
+    """Whether a file is of it, by its path and first 64 kB (none for a folder)."""
+    read: Callable[..., Record | xr.DataArray]
+    write: Callable[[xr.DataArray, Path], object] | None = None
+    option: str = ""
+    """The argument of `read` that is for this format only."""
+
+
+def _begins(*marks: bytes) -> Callable[[Path, bytes], bool]:
+    return lambda path, head: head.startswith(marks)
+
+
+def _text(looks_like: Callable[[str], bool], *suffixes: str) -> Callable[[Path, bytes], bool]:
+    return lambda path, head: (
+        bool(head)
+        and b"\0" not in head
+        and (looks_like(text_of(head)) or path.suffix.lower() in suffixes)
+    )
+
+
+#: Every format, in the order in which they are tried: the one place where a new one is named.
+FORMATS = (
+    Format(
+        "JCAMP-DX",
+        (".dx", ".jdx"),
+        _text(jcamp.looks_like, ".dx", ".jdx", ".jcm", ".jcamp"),
+        jcamp.read,
+        jcamp.write,
+        option="block",
+    ),
+    Format(
+        "text table",
+        (".csv", ".txt"),
+        _text(text_table.looks_like, ".csv", ".txt", ".tsv", ".dat"),
+        text_table.read,
+        text_table.write,
+    ),
+    Format("numpy array", (".npy",), _begins(b"\x93NUMPY"), numpy_file.read),
+    Format("numpy archive", (".npz",), _begins(b"PK\x03\x04"), numpy_file.read, numpy_file.write),
+    Format(
+        "netCDF",
+        (".nc",),
+        _begins(b"\x89HDF\r\n\x1a\n"),
+        partial(archive.read, kind="netCDF"),
+        partial(archive.write, kind="netCDF"),
+    ),
+    Format(
+        "Zarr",
+        (".zarr",),
+        lambda path, head: (path / "zarr.json").is_file(),
+        partial(archive.read, kind="Zarr"),
+        partial(archive.write, kind="Zarr"),
+        option="chunks",
+    ),
 )
-TEXT_TABLE = (".csv", ".txt", ".tsv", ".dat")
-JCAMP = (".dx", ".jdx", ".jcm", ".jcamp")
+KNOWN = "fidkit reads " + ", ".join(f"{form.name} ({', '.join(form.suffixes)})" for form in FORMATS)
 
 
 def read(
@@ -90,21 +151,22 @@ def read(
         )
         if block is not None and (not isinstance(block, Integral) or isinstance(block, bool)):
             raise FidkitError(f"block must be a whole number from 1; got {shown(block)}")
-        kind = _kind(path)
-        for name, value, wanted in (("block", block, "JCAMP-DX"), ("chunks", chunks, "Zarr")):
-            if value is not None and kind != wanted:
-                raise FidkitError(f"{name} is for {wanted} only; this is {kind}")
-        if kind in ("netCDF", "Zarr"):
-            from fidkit.formats import archive
-
-            signal = archive.read(path, kind, chunks)
-            if given:
-                signal = _assemble(archive.as_record(signal), given, path.name, signal)
-            return signal
-        return _assemble(_reader(kind)(path, block), given, path.name)
+        options = {"block": block, "chunks": chunks}
+        options = {name: value for name, value in options.items() if value is not None}
+        here = _format_of(path)
+        for form in FORMATS:
+            if form.option in options and form is not here:
+                raise FidkitError(f"{form.option} is for {form.name} only; this is {here.name}")
+        found = here.read(path, **options)
+        if isinstance(found, Record):
+            return _assemble(found, given, path.name)
+        # a signal already
+        return _assemble(archive.as_record(found), given, path.name, found) if given else found
     except FidkitError as error:
         text = " ".join(str(error).splitlines())
         raise type(error)(f"{path.name}: {text}") from error
+    except FileNotFoundError as error:
+        raise FidkitError(f"{path}: there is no such file or folder; check the path") from error
     except OSError as error:
         raise FidkitError(f"{path.name}: cannot be read: {error.strerror or error}") from error
     except MemoryError as error:
@@ -146,27 +208,12 @@ def write(signal: xr.DataArray, path: str | os.PathLike[str]) -> Path:
     suffix = path.suffix.lower()
     try:
         signal = writable(signal)
-        if suffix in (".nc", ".zarr"):
-            from fidkit.formats import archive
-
-            archive.write(signal, path, "netCDF" if suffix == ".nc" else "Zarr")
-        elif suffix == ".npz":
-            from fidkit.formats import numpy_file
-
-            numpy_file.write(signal, path)
-        elif suffix in (".csv", ".txt"):
-            from fidkit.formats import text_table
-
-            text_table.write(signal, path)
-        elif suffix in (".dx", ".jdx"):
-            from fidkit.formats import jcamp
-
-            jcamp.write(signal, path)
-        else:
+        writers = {end: form.write for form in FORMATS if form.write for end in form.suffixes}
+        if suffix not in writers:
             raise FidkitError(
-                "the suffix must be .nc, .zarr, .npz, .csv, .txt, .dx or .jdx; "
-                f"got {suffix or 'none'}"
+                f"the suffix must be one of {', '.join(writers)}; got {suffix or 'none'}"
             )
+        writers[suffix](signal, path)
     except FidkitError as error:
         raise type(error)(f"{path.name}: {error}") from error
     except OSError as error:
@@ -251,47 +298,25 @@ def _given(**arguments: Any) -> dict[str, Any]:
     return given
 
 
-def _kind(path: Path) -> str:
+def _format_of(path: Path) -> Format:
+    head = b""
+    if not path.is_dir():
+        if path.exists() and not path.is_file():  # reading from a pipe or a device may never end
+            raise FidkitError("is neither a file nor a folder; copy the record into a file first")
+        with path.open("rb") as file:
+            head = file.read(65536)
+        if not head.strip():
+            raise FidkitError("the file is empty; copy or record it again")
+    for form in FORMATS:
+        if form.knows(path, head):
+            return form
     if path.is_dir():
-        if (path / "zarr.json").is_file():
-            return "Zarr"
         raise FidkitError(f"is a folder, and no Zarr store (format 3); {KNOWN}")
-    if path.exists() and not path.is_file():  # reading from a pipe or a device may never end
-        raise FidkitError("is neither a file nor a folder; copy the record into a file first")
-    with path.open("rb") as file:
-        head = file.read(65536)
-    if not head.strip():
-        raise FidkitError("the file is empty; copy or record it again")
-    if head.startswith(b"\x93NUMPY"):
-        return ".npy"
-    if head.startswith(b"PK\x03\x04"):
-        return ".npz"
-    if head.startswith(b"\x89HDF\r\n\x1a\n"):
-        return "netCDF"
     if head.startswith((b"CDF\x01", b"CDF\x02", b"CDF\x05")):
         raise FidkitError("is netCDF of an older kind; fidkit reads netCDF-4, as it writes it")
-    suffix = path.suffix.lower()
-    if b"\0" not in head:
-        from fidkit.formats import jcamp, text_table
-        from fidkit.formats.record import text_of
-
-        text = text_of(head)
-        if jcamp.looks_like(text) or suffix in JCAMP:
-            return "JCAMP-DX"
-        if suffix in TEXT_TABLE or text_table.looks_like(text):
-            return "text table"
+    if head.startswith(b"\xd0\xcf\x11\xe0"):
+        raise FidkitError(SPREADSHEET)
     raise FidkitError(f"is of no format that fidkit knows; {KNOWN}")
-
-
-def _reader(kind: str) -> Callable[[Path, int | None], Record]:
-    from fidkit.formats import jcamp, numpy_file, text_table
-
-    return {
-        "JCAMP-DX": lambda path, block: jcamp.read(path, block=block),
-        "text table": lambda path, block: text_table.read(path),
-        ".npy": lambda path, block: numpy_file.read(path),
-        ".npz": lambda path, block: numpy_file.read(path),
-    }[kind]
 
 
 def _assemble(
@@ -302,15 +327,19 @@ def _assemble(
     for name, value in given.items():
         stated = getattr(record, name)
         if stated is not None and not _same(stated, value):
-            notes.append(f"{name} {_text(value)} was given; the file says {_text(stated)}")
+            notes.append(
+                f"{name} {_value_text(value)} was given; the file says {_value_text(stated)}"
+            )
         elif name != "dims":
-            notes.append(f"{name} {_text(value)} was given")
+            notes.append(f"{name} {_value_text(value)} was given")
         setattr(record, name, value)
     is_fid = record.frequency is None
     if record.carrier_frequency is None:
-        raise FidkitError("carrier_frequency is not in the file; pass carrier_frequency=<Hz>")
+        raise FidkitError(
+            "carrier_frequency is not in the file; give carrier_frequency in Hz (--carrier-frequency HZ)"
+        )
     if is_fid and record.dwell_time is None:
-        raise FidkitError("dwell_time is not in the file; pass dwell_time=<s>")
+        raise FidkitError("dwell_time is not in the file; give dwell_time in s (--dwell-time S)")
     if not is_fid and {"dwell_time", "time_start"} & given.keys():
         raise FidkitError("holds a spectrum, which has no dwell_time or time_start to give")
     if not record.nucleus:
@@ -321,7 +350,7 @@ def _assemble(
         nucleus = find_nucleus(record.nucleus or "1H").name
     except FidkitError as error:
         raise FidkitError(
-            f"{error} in the file; pass nucleus=<name> to read it as another one"
+            f"{error} in the file; give nucleus (--nucleus NAME) to read it as another one"
         ) from None
     shared: dict[str, Any] = {
         "carrier_frequency": record.carrier_frequency,
@@ -376,5 +405,5 @@ def _same(one: Any, other: Any) -> bool:
     return bool(one == other)
 
 
-def _text(value: Any) -> str:
+def _value_text(value: Any) -> str:
     return f"{value:.10g}" if isinstance(value, Real) else repr(value)

@@ -35,6 +35,7 @@ from fidkit.formats.record import (
     printed_unit,
     real_number,
     require_finite,
+    rounding_note,
     text_of,
 )
 from fidkit.params import FidkitError
@@ -572,10 +573,7 @@ def _axis(x: Column, points: int, notes: list[str], name: str) -> tuple[float | 
                     f"line {x.stated[what][1]}: the {what} X is stated as {x.stated[what][0]}, but the "
                     f"axis reaches {extreme:.8g}; the file is damaged (or correct the header)"
                 )
-    if rounding > 1e-6 * abs(step):
-        notes.append(
-            f"the {name} is stated to {rounding / abs(step):.1e} of itself only, by the digits printed"
-        )
+    notes += rounding_note(name, rounding / abs(step), "the header")
     return first, step
 
 

@@ -19,6 +19,7 @@ import xarray as xr
 from fidkit import signals
 from fidkit.files import write_whole
 from fidkit.formats.record import (
+    SPREADSHEET,
     Record,
     exact_spacing,
     mapping,
@@ -104,6 +105,8 @@ def _array(file: BinaryIO, size: int, name: str) -> npt.NDArray[Any]:
 
 def _archive(archive: zipfile.ZipFile, size: int) -> Record:
     members = {info.filename.removesuffix(".npy"): info for info in archive.infolist()}
+    if "[Content_Types].xml" in members or "mimetype" in members:
+        raise FidkitError(SPREADSHEET)
     if len(members) < len(archive.infolist()):
         raise FidkitError("holds two arrays of one name; save it again with numpy.savez")
     unpacked = sum(info.file_size for info in members.values())

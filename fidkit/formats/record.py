@@ -20,6 +20,7 @@ from fidkit.params import FidkitError, shown
 
 __all__ = [
     "FREQUENCY_UNITS",
+    "SPREADSHEET",
     "TIME_UNITS",
     "Record",
     "check_facts",
@@ -30,6 +31,7 @@ __all__ = [
     "printed_unit",
     "real_number",
     "require_finite",
+    "rounding_note",
     "text_of",
     "writable",
 ]
@@ -42,6 +44,13 @@ TIME_UNITS = {
     **dict.fromkeys(("ns", "nanoseconds"), 1e-9),
 }  # fmt: skip
 FREQUENCY_UNITS = {"hz": 1.0, "hertz": 1.0, "khz": 1e3, "mhz": 1e6}
+
+#: What is said of such a file.
+SPREADSHEET = "is a spreadsheet or office document; save the table as .csv"
+
+#: A spacing known better than this, of itself, needs no note: the offset of a line 100 Hz from the
+#: carrier is then known to 1 mHz.
+KNOWN_WELL = 1e-5
 
 #: Facts of a record that are attributes of the signal too.
 FIELDS = ("carrier_frequency", "nucleus", "units", "sample", "coil")
@@ -117,6 +126,13 @@ def real_number(text: str, what: str) -> float:
     if not np.isfinite(value):
         raise FidkitError(f"{what} must be a finite number; got {text.strip()[:40]!r}")
     return value
+
+
+def rounding_note(name: str, known: float, source: str) -> list[str]:
+    """The note that a spacing is known to `known` of itself only, where it matters."""
+    if not known > KNOWN_WELL:
+        return []
+    return [f"the {name} is known to {100 * known:.2g} % only, from the digits of {source}"]
 
 
 def exact_spacing(axis: npt.NDArray[np.float64]) -> float:

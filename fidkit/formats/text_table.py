@@ -38,6 +38,7 @@ from fidkit.formats.record import (
     printed_unit,
     real_number,
     require_finite,
+    rounding_note,
     text_of,
 )
 from fidkit.params import FidkitError
@@ -137,11 +138,16 @@ def read(path: Path) -> Record:
             cells = [_unquoted(cell) for cell in re.split(delimiter, plain)]
         if cells:
             if len(cells) != len(header):
-                comma = plain.count(",") > plain.count(".") and delimiter != ","
-                remedy = "; write decimal points, not commas" if comma or delimiter == "," else ""
+                if len(cells) < len(header):
+                    missing = ", ".join(header[len(cells) :])
+                    remedy = f"nothing stands for {missing}; complete the line"
+                elif "," in plain:
+                    remedy = "write decimal points, not commas, or remove what is too much"
+                else:
+                    remedy = "remove what is too much"
                 raise FidkitError(
                     f"line {number}: has {len(cells)} columns where the table names "
-                    f"{len(header)} ({', '.join(header)}){remedy}"
+                    f"{len(header)} ({', '.join(header)}); {remedy}"
                 )
             rows.append(cells)
             numbers.append(number)
@@ -327,10 +333,7 @@ def _axis(
         )
     if stated is None or loose > known:
         record.dwell_time = exact_spacing(axis) * scale
-        if known > 1e-6 * step:
-            record.notes.append(
-                f"the dwell time is stated to {known / step:.1e} of itself only, by the digits printed"
-            )
+        record.notes += rounding_note("dwell time", known / step, "the time column")
     if start is None:
         record.time_start = float(axis[0]) * scale
     elif abs(start - axis[0] * scale) > 0.51 * unit[0] * scale + printed["time_start"]:
