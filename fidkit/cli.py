@@ -53,6 +53,8 @@ TABLE = {
     "amplitude": ("", "amplitude"),
     "snr": ("", "SNR"),
 }
+#: Form of the result by the ending of `--out`.
+FORMS = {".csv": "csv", ".json": "json", ".txt": "table"}
 UNIT_IN_NAME = {"Hz": "_hz", "ppm": "_ppm", "s": "_s", "T": "_tesla", "degree": "_degree", "1": ""}
 
 #: Records measured at a time, so that long work can be shown and stopped.
@@ -164,7 +166,7 @@ def _parser() -> argparse.ArgumentParser:
     measure.add_argument(
         *("--format",),
         choices=("table", "csv", "json"),
-        help="form of the result (as the name of --out ends, else table)",
+        help="form of the result (as the name of --out ends: .csv, .json, .txt; else table)",
     )
     measure.add_argument("--out", metavar="FILE", help="write the result here, whole or not at all")
     measure.set_defaults(run=_measure)
@@ -188,14 +190,24 @@ def _parser() -> argparse.ArgumentParser:
 
 
 def _measure(options: argparse.Namespace) -> int:
-    form = options.format
-    if form is None:
-        ending = Path(options.out).suffix.lower() if options.out else ""
-        form = {".csv": "csv", ".json": "json"}.get(ending, "table")
+    form = options.format or "table"
+    if options.out and not options.format:
+        ending = Path(options.out).suffix.lower()
+        if ending not in FORMS:
+            raise fidkit.FidkitError(
+                f"--out {options.out}: the name must end in {', '.join(FORMS)}; got "
+                f"{ending or 'none of them'}; or say the form by --format"
+            )
+        form = FORMS[ending]
+    for name, pair in (("region", options.region), ("noise", options.noise)):
+        if pair and pair[0] >= pair[1]:
+            given, right = (f"{x:g} {y:g}" for x, y in (pair, sorted(pair)))
+            remedy = f"give --{name} {right}" if pair[0] > pair[1] else "they must differ"
+            raise fidkit.FidkitError(f"--{name} {given}: low comes before high; {remedy}")
     chain = fidkit.Chain.load(options.chain) if options.chain else None
-    records, passed_over, results = _records(options.paths)
-    for result in results:
-        print(f"fidkit: {result.error}", file=sys.stderr)
+    records, passed_over = _records(options.paths)
+    results: list[Result] = []
+    in_table = form == "table" and not options.out  # failures are then read there, once
     stopped = False
     progress = Progress(len(records))
     for number, (name, path) in enumerate(records):
@@ -208,8 +220,9 @@ def _measure(options: argparse.Namespace) -> int:
             stopped = True
         except Exception as error:  # whatever one file does, the others are still measured
             found.append(Result(name, error=_named(name, error)))
-            progress.clear()
-            print(f"fidkit: {found[-1].error}", file=sys.stderr)
+            if not in_table:
+                progress.clear()
+                print(f"fidkit: {found[-1].error}", file=sys.stderr)
         results += found
         if stopped:
             break
@@ -236,16 +249,13 @@ def _measure(options: argparse.Namespace) -> int:
     return 130 if stopped else int(bad > 0 or failed)
 
 
-def _records(paths: Sequence[str]) -> tuple[list[tuple[str, Path]], list[str], list[Result]]:
-    """Name and path of every record; names passed over; results for what is not there."""
+def _records(paths: Sequence[str]) -> tuple[list[tuple[str, Path]], list[str]]:
+    """Name and path of every record, and names passed over."""
     found: list[Path] = []
     passed_over: list[str] = []
-    missing: list[Result] = []
     for text in paths:
         path = Path(text)
-        if not path.exists():
-            missing.append(Result(text, error=f"{text}: there is no such file or folder"))
-        elif path.is_dir() and not _is_store(path):
+        if path.is_dir() and not _is_store(path):
             for inner in sorted(path.iterdir()):
                 if inner.name.startswith((".", "__")) or (inner.is_dir() and not _is_store(inner)):
                     continue
@@ -260,7 +270,7 @@ def _records(paths: Sequence[str]) -> tuple[list[tuple[str, Path]], list[str], l
             found.append(path)
     names = [path.name for path in found]
     unique = len(set(names)) == len(names)
-    return [(path.name if unique else str(path), path) for path in found], passed_over, missing
+    return [(path.name if unique else str(path), path) for path in found], passed_over
 
 
 def _is_store(path: Path) -> bool:
@@ -682,12 +692,15 @@ def _named(name: str, error: BaseException) -> str:
 
 def _reason(error: BaseException) -> str:
     """One line that says what went wrong."""
+    if isinstance(error, FileNotFoundError) and error.filename:
+        return f"{error.filename}: there is no such file or folder; check the path"
     if isinstance(error, OSError) and error.strerror:
         where = f"{error.filename}: " if error.filename else ""
         return f"{where}{error.strerror.lower()}; check the path and who may use it"
     text = " ".join(str(error).split())
     if isinstance(error, fidkit.FidkitError | OSError):
-        return text
+        # a step is no word of the command line
+        return re.sub(r"; apply (\w+) first", r"; apply \1 first (in a chain file, --chain)", text)
     if isinstance(error, MemoryError):
         return "not enough memory for this record; measure fewer records at a time"
     last = traceback.extract_tb(error.__traceback__)[-1]
