@@ -1,4 +1,7 @@
-"""The least uncertainty that any unbiased estimate can have (Cramer-Rao), in closed form."""
+"""The least uncertainty that any unbiased estimate can have (Cramer-Rao), in closed form.
+
+For planning a measurement, and for holding the estimates of this package to it.
+"""
 
 from __future__ import annotations
 
