@@ -28,7 +28,7 @@ import fidkit
 from fidkit import signals
 from fidkit.display import number_text, quantity_text, scaled_unit
 from fidkit.files import write_whole
-from fidkit.measure import QUANTITIES
+from fidkit.measure.found import QUANTITIES, column_name
 
 __all__ = ["main"]
 
@@ -55,7 +55,6 @@ TABLE = {
 }
 #: Form of the result by the ending of `--out`.
 FORMS = {".csv": "csv", ".json": "json", ".txt": "table"}
-UNIT_IN_NAME = {"Hz": "_hz", "ppm": "_ppm", "s": "_s", "T": "_tesla", "degree": "_degree", "1": ""}
 
 #: Records measured at a time, so that long work can be shown and stopped.
 BLOCK = 256
@@ -385,17 +384,11 @@ def _csv(results: Sequence[Result]) -> str:
     for result in results:
         row: dict[str, Any] = {"source": result.source, **result.where}
         for name, quantity in result.quantities.items():
-            # the unit of an amplitude is that of its record: no name of a column can hold it
-            own_column = name == "amplitude"
-            unit = "" if own_column else UNIT_IN_NAME.get(quantity.unit, f"_{quantity.unit}")
-            base = name.removesuffix("_ppm")
             # repr is the shortest text that reads back as the same number
-            for column, value in (
-                (f"{base}{unit}", quantity.value),
-                (f"{base}_std{unit}", quantity.std),
-            ):
+            for end, value in (("", quantity.value), ("_std", quantity.std)):
+                column = column_name(name, quantity.unit, end)
                 row[column] = repr(value) if math.isfinite(value) else ""
-            if own_column:
+            if name == "amplitude":
                 row[f"{name}_unit"] = quantity.unit
             row[f"{name}_status"] = quantity.status
         row |= {"lineshape": result.lineshape, "status": result.status}

@@ -19,6 +19,8 @@ import pytest
 import xarray as xr
 
 import fidkit as fk
+from fidkit import formats
+from fidkit.formats.record import Record
 from fidkit.params import FidkitError
 
 CARRIER = 63.87e6
@@ -269,6 +271,29 @@ def test_arguments_win_over_an_archive(tmp_path):
     np.testing.assert_array_equal(back.values, fid.values)
     np.testing.assert_array_equal(back.time.values, fid.time.values)
     assert list(back.coords) == list(fid.coords)
+
+
+def test_a_new_format_needs_one_place(tmp_path, monkeypatch):
+    """Its line in the table: reading, writing and the words about it follow."""
+
+    def put(signal, path):
+        path.write_bytes(b"BENCH" + np.asarray(signal.values, np.complex128).tobytes())
+
+    def get(path):
+        return Record(np.frombuffer(path.read_bytes()[5:], np.complex128).copy())
+
+    new = formats.Format(
+        "bench dump", (".bench",), lambda path, head: head.startswith(b"BENCH"), get, put
+    )
+    monkeypatch.setattr(formats, "FORMATS", (*formats.FORMATS, new))
+    fid = fk.from_array(np.arange(5) * 2j, dwell_time=1e-3, carrier_frequency=CARRIER)
+    path = fk.write(fid, tmp_path / "loop.bench")
+    back = fk.read(path, dwell_time=1e-3, carrier_frequency=CARRIER)
+    np.testing.assert_array_equal(back.values, fid.values)
+    with pytest.raises(FidkitError, match="block is for JCAMP-DX only; this is bench dump"):
+        fk.read(path, block=1)
+    with pytest.raises(FidkitError, match=r"one of \.dx, .*\.bench; got \.else"):
+        fk.write(fid, tmp_path / "loop.else")
 
 
 def test_bare_arrays(tmp_path):
