@@ -195,7 +195,7 @@ def _measure(options: argparse.Namespace) -> int:
         if ending not in FORMS:
             raise fidkit.FidkitError(
                 f"--out {options.out}: the name must end in {', '.join(FORMS)}; got "
-                f"{ending or 'none of them'}; or say the form by --format"
+                f"{ending or 'no ending'}; or give --format"
             )
         form = FORMS[ending]
     for name, pair in (("region", options.region), ("noise", options.noise)):
