@@ -133,7 +133,8 @@ def from_array(
     )
     check_signal(fid, "from_array")
     carrier = float(attributes["carrier_frequency"])
-    if 2 * carrier * dwell < 1:
+    # megahertz taken for hertz: there are no such small carriers with so wide a band
+    if carrier < 1000 and 2 * carrier * dwell < 1:
         raise FidkitError(
             f"carrier_frequency must be more than half the spectral width of {1 / dwell:g} Hz; got "
             f"{carrier:g} Hz; give it in Hz, not MHz, and dwell_time in s"
