@@ -2,10 +2,10 @@
 
 import os
 
+from hypothesis import settings  # loads no numpy
+
 for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):
     os.environ.setdefault(name, "1")
-
-from hypothesis import settings
 
 # the same examples every time where a verdict hangs on it; new ones at the desk
 settings.register_profile("repeatable", derandomize=True, deadline=None)
