@@ -76,7 +76,7 @@ def measure_block(record: Record, wanted: Wanted) -> list[list[Line]]:
         offset[rows] = fit.offset >= OFFSET_EVIDENCE
         for place in np.flatnonzero(enough):
             row = rows[place]
-            results[row] = [_from_single(fit, int(place), record, count, _at(noise, row))]
+            results[row] = [_from_single(fit, int(place), record, count, _noise_of(noise, row))]
     for row in range(records):
         if not seen[row]:
             results[row] = [nothing() for _ in range(wanted.lines)]
@@ -94,7 +94,7 @@ def measure_block(record: Record, wanted: Wanted) -> list[list[Line]]:
                 more[row],
                 neighbours[row],
                 bool(level[row]) or bool(offset[row]),
-                _at(noise, row),
+                _noise_of(noise, row),
             )
     for line in (line for lines in results for line in lines):
         if wanted.near is not None and abs(line.frequency - wanted.near) > 0.05 / dwell:
@@ -104,7 +104,7 @@ def measure_block(record: Record, wanted: Wanted) -> list[list[Line]]:
     return results
 
 
-def _at(noise: tuple[npt.NDArray[Any], int] | None, row: int) -> tuple[float, int] | None:
+def _noise_of(noise: tuple[npt.NDArray[Any], int] | None, row: int) -> tuple[float, int] | None:
     return None if noise is None else (float(noise[0][row]), noise[1])
 
 
